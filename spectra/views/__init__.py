@@ -1,0 +1,1 @@
+"""The pages of master data. Views translate HTTP; selectors read, services write."""
