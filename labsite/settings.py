@@ -228,7 +228,9 @@ REVIEW_HOURS = env_int("BANDLEDGER_REVIEW_HOURS", 24)  # how long a reviewer may
 ANALYSIS_ATTEMPTS = 3
 EXAMINE = env_flag("BANDLEDGER_EXAMINE", True)
 
-LABORATORY_NAME = env_text("BANDLEDGER_LABORATORY") or ("Demonstration laboratory" if DEMO else "Quality control laboratory")
+LABORATORY_NAME = env_text("BANDLEDGER_LABORATORY") or (
+    "Demonstration laboratory" if DEMO else "Quality control laboratory"
+)
 LABORATORY_TIME_ZONE = env_text("BANDLEDGER_TIME_ZONE", "UTC") or "UTC"
 SMALL_LABORATORY_KEY = "small_laboratory"
 

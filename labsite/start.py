@@ -167,7 +167,11 @@ def load_settings(own: bool):
     try:
         from labsite import settings
     except ImproperlyConfigured as error:
-        raise Refusal(str(error) if own else f"{error} (A laboratory of your own starts with: start --own)") from None
+        if not own and os.environ.get("BANDLEDGER_PRODUCTION"):
+            raise Refusal(
+                "The demonstration is refused in production: serve your own laboratory, start --own."
+            ) from None
+        raise Refusal(str(error)) from None
     except OSError as error:
         raise Refusal(
             f"Cannot write {error.filename}: {error.strerror}. Name a folder for the data with BANDLEDGER_VAR."

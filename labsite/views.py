@@ -8,17 +8,20 @@ from django.db import connection
 from django.http import HttpRequest, HttpResponse, JsonResponse
 from django.shortcuts import redirect
 from django.template import loader
+from django.views.decorators.http import require_safe
 
 from .answers import refusal, wants_json
 from .errors import NotAllowed, NotVisible
 
 
+@require_safe
 def home(request: HttpRequest) -> HttpResponse:
     """Where everybody starts; a person without a role yet finds on their account's page what to do."""
     return redirect(settings.LOGIN_REDIRECT_URL if request.user.roles else "accounts:profile")
 
 
 @login_not_required
+@require_safe
 def health(request: HttpRequest) -> HttpResponse:
     """Whether the server can answer and read its database; says nothing about the laboratory."""
     with connection.cursor() as cursor:

@@ -86,6 +86,16 @@ def load(*, say: Say) -> None:
         record(Event.DEMO_LOADED, by=None, subject=Subject("laboratory", "demo", "demonstration"))
 
 
+def _crystal() -> dict[str, object]:
+    """The one crystal of the demonstration, on which its ATR references were measured too."""
+    atr = next(a for i in masters.INSTRUMENTS for a in i.accessories if "atr" in a.serves)
+    return {
+        "atr_crystal_index": atr.atr_crystal_index,
+        "atr_angle_deg": atr.atr_angle_deg,
+        "atr_reflections": atr.atr_reflections,
+    }
+
+
 class _Laboratory:
     """The people and files of one loading, so that the steps need not pass them along."""
 
@@ -196,7 +206,9 @@ class _Laboratory:
             "method_id": method_id,
         }
         for _edition in range(item.edition):
-            self.approve("procedure", master.draft_procedure(by=self.people["owner"], number=item.number, values=values))
+            self.approve(
+                "procedure", master.draft_procedure(by=self.people["owner"], number=item.number, values=values)
+            )
 
     def _draft_materials(self, codes: dict[str, records.Material]) -> None:
         for code, item in codes.items():
@@ -239,6 +251,7 @@ class _Laboratory:
                     "technique": item.technique,
                     "phase": item.phase,
                     "resolution_cm1": item.resolution_cm1,
+                    **(_crystal() if item.technique == "atr" else {}),
                 },
             )
             self.approve("reference", row)
@@ -309,9 +322,7 @@ class _Laboratory:
         if not told.conclusion:
             return
         self._claims(row, told, analyst)
-        drafts.write_conclusion(
-            version_id=row.pk, by=analyst, conclusion=told.conclusion, text=told.text, edits=None
-        )
+        drafts.write_conclusion(version_id=row.pk, by=analyst, conclusion=told.conclusion, text=told.text, edits=None)
         if not told.submitted:
             return
         fresh = selectors.version(row.pk)

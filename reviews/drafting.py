@@ -1,8 +1,8 @@
 """From the result of an analysis to draft claims: the interface between computing and judging. Pure and frozen.
 
-`draft_claims(result, ...)` reads the result's JSON form alone. Each claim carries what was computed, as it was computed;
-what a person makes of it is written beside it, never over it. Keys are stable within an interpretation, so that the next
-version of a claim can be laid beside the last one.
+`draft_claims(result, ...)` reads the result's JSON form alone. Each claim carries what was computed, as it was
+computed; what a person makes of it is written beside it, never over it. Keys are stable within an interpretation, so that the
+next version of a claim can be laid beside the last one.
 """
 
 from __future__ import annotations
@@ -91,7 +91,15 @@ def _identity(result: Mapping) -> list[DraftClaim]:
             must_see=identity["verdict"] != "consistent",
             evidence={
                 name: identity.get(name, [])
-                for name in ("for", "against", "would_decide", "metrics", "missing_bands", "extra_bands", "size_outliers")
+                for name in (
+                    "for",
+                    "against",
+                    "would_decide",
+                    "metrics",
+                    "missing_bands",
+                    "extra_bands",
+                    "size_outliers",
+                )
             }
             | {"reference": identity.get("reference", ""), "bands_compared": identity.get("bands_compared")},
         )

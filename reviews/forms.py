@@ -1,4 +1,4 @@
-"""Forms of this layer: they turn text into values and say beside the field what is wrong. Rules live in the services."""
+"""Forms of this layer: they turn text into values and say beside the field what is wrong. Services hold the rules."""
 
 from __future__ import annotations
 
@@ -115,7 +115,5 @@ class AnswerForm(forms.Form):
 
 
 class RoleForm(forms.Form):
-    role = forms.ChoiceField(
-        choices=[choice for choice in SpectrumRole.choices if choice[0] != "repeat"], label="Role"
-    )
+    role = forms.ChoiceField(choices=[choice for choice in SpectrumRole.choices if choice[0] != "repeat"], label="Role")
     reason = forms.CharField(widget=forms.Textarea(attrs={"rows": 2}), max_length=2000, label="Reason", required=False)

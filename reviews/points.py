@@ -129,10 +129,10 @@ def _contradiction(claim: StatedClaim) -> DraftPoint:
 
 
 def _open(claims: Sequence[StatedClaim], conclusion: str) -> list[DraftPoint]:
-    """What stays open although the conclusion leans on it: measurement limits, impurities not visible, undecided groups.
+    """What stays open although the conclusion leans on it: measurement limits, impurities not seen, undecided groups.
 
-    Undecided groups that the declaration expects share one point, and so do contaminants that cannot be seen: one glance
-    settles them together.
+    Undecided groups that the declaration expects share one point, and so do contaminants that cannot be seen: one
+    glance settles them together.
     """
     points = []
     unseen = [claim for claim in claims if _is_open(claim) and claim.verdict == "cannot_be_seen"]
@@ -181,5 +181,9 @@ def _is_open(claim: StatedClaim) -> bool:
 
 def _hazard(claim: StatedClaim) -> DraftPoint:
     return DraftPoint(
-        key=f"hazard:{claim.key}", kind="hazard", title=f"Hazard: {claim.title}", detail=claim.hazard, claim_key=claim.key
+        key=f"hazard:{claim.key}",
+        kind="hazard",
+        title=f"Hazard: {claim.title}",
+        detail=claim.hazard,
+        claim_key=claim.key,
     )

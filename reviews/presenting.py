@@ -110,7 +110,11 @@ def life_line(examination: Examination, version: InterpretationVersion | None) -
         ("measured", "waits for a spectrum", decisive.created_at if decisive else None),
         ("analysed", "being analysed", finished),
         ("interpreted", "being interpreted", submitted),
-        (decision.get_verdict_display() if decision else "decided", "second reading", decision.at if decision else None),
+        (
+            decision.get_verdict_display() if decision else "decided",
+            "second reading",
+            decision.at if decision else None,
+        ),
     ]
     line, now_set = [], False
     for done, now, when in steps:
@@ -176,7 +180,9 @@ def sample_rows(samples: Sequence[Sample]) -> list[dict[str, object]]:
             by_sample[sample.pk] = examination
     versions: dict[int, InterpretationVersion] = {}
     rows = InterpretationVersion.objects.filter(interpretation__examination__in=by_sample.values())
-    for version in rows.select_related("interpretation", "submitted_by", "opened_by", "decision__by").order_by("number"):
+    for version in rows.select_related("interpretation", "submitted_by", "opened_by", "decision__by").order_by(
+        "number"
+    ):
         versions[version.interpretation.examination_id] = version
     lines = []
     for sample in samples:
@@ -383,13 +389,14 @@ def positions_by_group(result: Mapping) -> dict[str, list[float]]:
 def claim_items(version: InterpretationVersion, result: Mapping) -> list[dict[str, object]]:
     positions = positions_by_group(result)
     claims = sorted(
-        version.claims.all(), key=lambda c: (c.kind != ClaimKind.IDENTITY, c.status != "proposed", not c.must_see, c.sort)
+        version.claims.all(),
+        key=lambda c: (c.kind != ClaimKind.IDENTITY, c.status != "proposed", not c.must_see, c.sort),
     )
     return [claim_item(claim, lanes_by_group=positions) for claim in claims]
 
 
 def bench_state(version: InterpretationVersion, user: User) -> dict[str, object]:
-    """What changes with every claim: how many wait, whether it can be signed. For _claims_head.html and _submit.html."""
+    """What changes with every claim: how many wait, whether it can be signed. Feeds _claims_head.html, _submit.html."""
     editable = permissions.may(user, version, Action.EDIT)
     states = Counter(claim.status for claim in version.claims.all())
     uneventful = [
@@ -440,7 +447,9 @@ def decision_note(version: InterpretationVersion) -> dict[str, object] | None:
     if decision.comment:
         reasons.append(decision.comment)
     if withdrawal:
-        reasons.append(f"Withdrawn by {withdrawal.by.printed_name}, {selectors.utc(withdrawal.at)}: {withdrawal.reason}")
+        reasons.append(
+            f"Withdrawn by {withdrawal.by.printed_name}, {selectors.utc(withdrawal.at)}: {withdrawal.reason}"
+        )
     return {
         "state": version.state,
         "by": decision.by.printed_name,
@@ -475,11 +484,16 @@ def point_items(version: InterpretationVersion, reviewer: User | None, viewer: U
                 "open_url": reverse("reviews:open_point", args=args),
                 "note_url": reverse("reviews:judge_point", args=args),
                 "answer_url": reverse("reviews:answer_point", args=args)
-                if read and read.judgement == Judgement.DISAGREE and permissions.may(viewer, version, Action.ANSWER)
+                if read
+                and read.judgement == Judgement.DISAGREE
+                and permissions.may(viewer, version, Action.ANSWER)
                 and viewer.pk != version.taken_by_id
                 else "",
                 "settle_url": reverse("reviews:settle_point", args=args)
-                if read and read.judgement == Judgement.DISAGREE and read.answer and not read.settled_at
+                if read
+                and read.judgement == Judgement.DISAGREE
+                and read.answer
+                and not read.settled_at
                 and viewer.pk == version.taken_by_id
                 else "",
                 "note": read.comment if read else "",
@@ -498,9 +512,7 @@ def sentences(point: MustSeePoint) -> list[str]:
     return [line for line in point.detail.split("\n") if line]
 
 
-def review_rows(
-    version: InterpretationVersion, result: Mapping, points: Sequence[Mapping]
-) -> list[dict[str, object]]:
+def review_rows(version: InterpretationVersion, result: Mapping, points: Sequence[Mapping]) -> list[dict[str, object]]:
     """Computed, analyst and reviewer side by side, for review.html."""
     positions = positions_by_group(result)
     judged = {}

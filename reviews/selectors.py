@@ -71,7 +71,13 @@ def examination(pk: int) -> Examination:
 def versions_of(row: Examination) -> list[InterpretationVersion]:
     return list(
         InterpretationVersion.objects.select_related(
-            "submitted_by", "taken_by", "opened_by", "decision__by", "decision__signature", "withdrawal__by", "submission"
+            "submitted_by",
+            "taken_by",
+            "opened_by",
+            "decision__by",
+            "decision__signature",
+            "withdrawal__by",
+            "submission",
         )
         .filter(interpretation__examination=row)
         .order_by("-number")
@@ -79,9 +85,7 @@ def versions_of(row: Examination) -> list[InterpretationVersion]:
 
 
 def latest_version(row: Examination) -> InterpretationVersion | None:
-    return (
-        InterpretationVersion.objects.filter(interpretation__examination=row).order_by("-number").first()
-    )
+    return InterpretationVersion.objects.filter(interpretation__examination=row).order_by("-number").first()
 
 
 def stated_claims(version: InterpretationVersion) -> list[StatedClaim]:
@@ -144,7 +148,8 @@ def check_sentence(spectrum: Spectrum) -> str:
     if check is None:
         return f"{spectrum.accessory} has no instrument check on record."
     if check.verdict != "passed":
-        return f"The last instrument check of {spectrum.accessory}, {utc(check.performed_at)}, was {check.get_verdict_display()}."
+        verdict = check.get_verdict_display()
+        return f"The last instrument check of {spectrum.accessory}, {utc(check.performed_at)}, was {verdict}."
     return f"The instrument check of {spectrum.accessory} was valid until {utc(check.valid_until)}, before the upload."
 
 
@@ -180,9 +185,13 @@ def departures(row: Examination, spectrum: Spectrum) -> list[str]:
             f"Resolution {spectrum.resolution_cm1:g} cm⁻¹; {procedure} asks for {procedure.resolution_cm1:g} cm⁻¹."
         )
     if spectrum.first_cm1 > procedure.low_cm1 + procedure.resolution_cm1:
-        found.append(f"The range begins at {spectrum.first_cm1:.0f} cm⁻¹; {procedure} asks for {procedure.low_cm1:g} cm⁻¹.")
+        found.append(
+            f"The range begins at {spectrum.first_cm1:.0f} cm⁻¹; {procedure} asks for {procedure.low_cm1:g} cm⁻¹."
+        )
     if spectrum.last_cm1 < procedure.high_cm1 - procedure.resolution_cm1:
-        found.append(f"The range ends at {spectrum.last_cm1:.0f} cm⁻¹; {procedure} asks for {procedure.high_cm1:g} cm⁻¹.")
+        found.append(
+            f"The range ends at {spectrum.last_cm1:.0f} cm⁻¹; {procedure} asks for {procedure.high_cm1:g} cm⁻¹."
+        )
     measured = row.spectra.filter(role__in=[SpectrumRole.DECISIVE, SpectrumRole.REPLICATE]).count()
     if measured < procedure.repeats:
         found.append(f"{measured} of {procedure.repeats} prescribed spectra were measured.")

@@ -1,9 +1,10 @@
 """The life of one interpretation version, as one table that a chemist can read. Pure: no Django, no database.
 
-A version is a draft until its analyst submits it with a signature; a reviewer takes it, or hands it back, or it goes back
-by itself when the time is up; in a blind second reading the reviewer first records an own reading, and only then sees the
-analyst's. Exactly one decision ends it. A rejected version is revised as a new one; an approved one can be withdrawn by a
-QA manager, or is superseded when a later version of the same interpretation is approved. Nothing leads back from an end.
+A version is a draft until its analyst submits it with a signature; a reviewer takes it, or hands it back, or it goes
+back by itself when the time is up; in a blind second reading the reviewer first records an own reading, and only then
+sees the analyst's. Exactly one decision ends it. A rejected version is revised as a new one; an approved one can be
+withdrawn by a QA manager, or is superseded when a later version of the same interpretation is approved. Nothing leads
+back from an end.
 """
 
 from __future__ import annotations
@@ -70,7 +71,12 @@ TRANSITIONS: dict[tuple[State, Action], tuple[State, Actor]] = {
     (State.APPROVED, Action.SUPERSEDE): (State.SUPERSEDED, Actor.SYSTEM),
 }
 
-OPEN_STATES = (State.DRAFT, State.SUBMITTED, State.READING_BLIND, State.IN_REVIEW)  # one of them for each interpretation
+OPEN_STATES = (
+    State.DRAFT,
+    State.SUBMITTED,
+    State.READING_BLIND,
+    State.IN_REVIEW,
+)  # one of them for each interpretation
 DECIDED_STATES = (State.APPROVED, State.REJECTED, State.WITHDRAWN, State.SUPERSEDED)
 WITH_REVIEWER = (State.READING_BLIND, State.IN_REVIEW)
 

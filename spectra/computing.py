@@ -83,6 +83,9 @@ def reference_conditions(reference: Reference) -> Conditions:
         technique=Technique(reference.technique),
         phase=Phase(reference.phase),
         resolution_cm1=reference.resolution_cm1,
+        atr_crystal_index=reference.atr_crystal_index,
+        atr_angle_deg=reference.atr_angle_deg,
+        atr_reflections=reference.atr_reflections,
     )
 
 

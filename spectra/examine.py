@@ -20,8 +20,8 @@ bands      list of {position_cm1, height_absorbance, prominence_absorbance, fwhm
            shape, snr, kind}; no value is null
 groups     list of {group, verdict, probability, agrees, for, against, would_decide}; probability is null unless it is
            calibrated; `for`, `against` and `would_decide` are lists of sentences
-identity   {verdict, agrees, metrics, missing_bands, extra_bands, size_outliers}; absent without --declared. metrics is a
-           list of {name, value, formula, region_cm1, pretreatment}; the band lists hold {position_cm1,
+identity   {verdict, agrees, metrics, missing_bands, extra_bands, size_outliers}; absent without --declared. metrics is
+           a list of {name, value, formula, region_cm1, pretreatment}; the band lists hold {position_cm1,
            height_absorbance, snr, ratio}, snr and ratio may be null
 impurities {screened: [{name, estimate_fraction, standard_uncertainty, significance, detection_limit_fraction, scale,
            verdict}], unexplained: [{position_cm1, height_absorbance, snr}]}; absent without --declared. The four
@@ -39,7 +39,7 @@ not_found_above_limit, cannot_be_seen. agrees: yes, no, neutral. Nothing here is
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 from spectra.core import formats, group_table, pipeline
@@ -53,12 +53,28 @@ from spectra.core.version import RESULT_SCHEMA
 GROUP_TABLE_FILE = Path(__file__).resolve().parent.parent / "fixtures" / "group_table" / "version_1.toml"
 
 _FINDING_KEYS = ("code", "severity", "message", "region_cm1")
-_BAND_KEYS = ("position_cm1", "height_absorbance", "prominence_absorbance", "fwhm_cm1", "area_absorbance_cm1",
-              "intensity", "shape", "snr", "kind")
+_BAND_KEYS = (
+    "position_cm1",
+    "height_absorbance",
+    "prominence_absorbance",
+    "fwhm_cm1",
+    "area_absorbance_cm1",
+    "intensity",
+    "shape",
+    "snr",
+    "kind",
+)
 _GROUP_KEYS = ("group", "verdict", "probability", "agrees", "for", "against", "would_decide")
 _IDENTITY_KEYS = ("verdict", "agrees", "metrics", "missing_bands", "extra_bands", "size_outliers")
-_SCREENED_KEYS = ("name", "estimate_fraction", "standard_uncertainty", "significance", "detection_limit_fraction",
-                  "scale", "verdict")
+_SCREENED_KEYS = (
+    "name",
+    "estimate_fraction",
+    "standard_uncertainty",
+    "significance",
+    "detection_limit_fraction",
+    "scale",
+    "verdict",
+)
 _UNEXPLAINED_KEYS = ("position_cm1", "height_absorbance", "snr")
 
 
@@ -66,8 +82,8 @@ _UNEXPLAINED_KEYS = ("position_cm1", "height_absorbance", "snr")
 class Request:
     """What to compare the files with, and what was answered about them."""
 
-    options: ReadOptions = ReadOptions()
-    conditions: Conditions = Conditions()
+    options: ReadOptions = field(default_factory=ReadOptions)
+    conditions: Conditions = field(default_factory=Conditions)
     declared: Path | None = None
     watch: tuple[Path, ...] = ()
     smiles: str | None = None
@@ -135,14 +151,24 @@ class Examiner:
             return
         for block in result.blocks:
             if not isinstance(block, SpectrumBlock):
-                yield Examined(_refused(shown, result.sha256, block.index, block.title, block.problem, block.findings), None)
+                yield Examined(
+                    _refused(shown, result.sha256, block.index, block.title, block.problem, block.findings), None
+                )
                 continue
             try:
                 analysed = pipeline.analyse(
-                    block, conditions=self.request.conditions, params=self.params, table=self.table,
-                    reference=self.reference, watch=self.watch, smiles=self.request.smiles)
+                    block,
+                    conditions=self.request.conditions,
+                    params=self.params,
+                    table=self.table,
+                    reference=self.reference,
+                    watch=self.watch,
+                    smiles=self.request.smiles,
+                )
             except CoreError as error:
-                yield Examined(_refused(shown, result.sha256, block.index, block.title, error.problem, block.findings), None)
+                yield Examined(
+                    _refused(shown, result.sha256, block.index, block.title, error.problem, block.findings), None
+                )
                 continue
             yield Examined(document_of(shown, result.sha256, block, analysed), analysed)
 
@@ -154,25 +180,37 @@ def read_bytes(path: Path) -> bytes:
             what = "is a folder" if path.is_dir() else "is no regular file" if path.exists() else "does not exist"
             raise CoreError("examine.cannot_open", f"The file {what}.", remedy="Name a spectrum file.")
         if path.stat().st_size > MAX_FILE_BYTES:
-            raise CoreError("examine.too_large", f"The file holds more than {MAX_FILE_BYTES // 2**20} MiB.",
-                            remedy="A spectrum file is far smaller; check which file this is.")
+            raise CoreError(
+                "examine.too_large",
+                f"The file holds more than {MAX_FILE_BYTES // 2**20} MiB.",
+                remedy="A spectrum file is far smaller; check which file this is.",
+            )
         return path.read_bytes()
     except CoreError:
         raise
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
-        raise CoreError("examine.cannot_open", f"The file cannot be opened: {reason}.",
-                        remedy="Check the name and the permissions.") from error
+        raise CoreError(
+            "examine.cannot_open", f"The file cannot be opened: {reason}.", remedy="Check the name and the permissions."
+        ) from error
 
 
 def document_of(shown: str, sha256: str, block: SpectrumBlock, analysed: AnalysisResult) -> dict[str, object]:
     """The object of the module's table for one spectrum that was read."""
     body = analysed.to_json()
     document: dict[str, object] = {
-        "schema": RESULT_SCHEMA, "file": shown, "sha256": sha256, "block": block.index, "title": block.title,
-        "status": "ok", "problem": None,
-        "findings": _narrowed(body["findings"], _FINDING_KEYS), "axis": body["axis"], "ordinate": body["ordinate"],
-        "noise_absorbance": body["noise_absorbance"], "bands": _narrowed(body["bands"], _BAND_KEYS),
+        "schema": RESULT_SCHEMA,
+        "file": shown,
+        "sha256": sha256,
+        "block": block.index,
+        "title": block.title,
+        "status": "ok",
+        "problem": None,
+        "findings": _narrowed(body["findings"], _FINDING_KEYS),
+        "axis": body["axis"],
+        "ordinate": body["ordinate"],
+        "noise_absorbance": body["noise_absorbance"],
+        "bands": _narrowed(body["bands"], _BAND_KEYS),
         "groups": _narrowed(body["groups"], _GROUP_KEYS),
     }
     if "identity" in body:
@@ -180,7 +218,8 @@ def document_of(shown: str, sha256: str, block: SpectrumBlock, analysed: Analysi
     if "impurities" in body:
         document["impurities"] = {
             "screened": _narrowed(body["impurities"]["screened"], _SCREENED_KEYS),
-            "unexplained": _narrowed(body["impurities"]["unexplained"], _UNEXPLAINED_KEYS)}
+            "unexplained": _narrowed(body["impurities"]["unexplained"], _UNEXPLAINED_KEYS),
+        }
     document["versions"] = body["versions"]
     document["digest"] = pipeline.digest_of({key: value for key, value in document.items() if key != "file"})
     return document
@@ -190,13 +229,32 @@ def _narrowed(rows: object, keys: Sequence[str]) -> list[dict[str, object]]:
     return [{key: row[key] for key in keys} for row in rows]  # type: ignore[union-attr,index]
 
 
-def _refused(shown: str, sha256: str | None, block: int | None, title: str | None, problem: Problem,
-             findings: Sequence[Finding] = ()) -> dict[str, object]:
+def _refused(
+    shown: str,
+    sha256: str | None,
+    block: int | None,
+    title: str | None,
+    problem: Problem,
+    findings: Sequence[Finding] = (),
+) -> dict[str, object]:
     return {
-        "schema": RESULT_SCHEMA, "file": shown, "sha256": sha256, "block": block, "title": title, "status": "refused",
+        "schema": RESULT_SCHEMA,
+        "file": shown,
+        "sha256": sha256,
+        "block": block,
+        "title": title,
+        "status": "refused",
         "problem": {"code": problem.code, "message": problem.message, "line": problem.line},
-        "findings": [{"code": f.code, "severity": f.severity.value, "message": f.message,
-                      "region_cm1": list(f.region_cm1) if f.region_cm1 else None} for f in findings]}
+        "findings": [
+            {
+                "code": f.code,
+                "severity": f.severity.value,
+                "message": f.message,
+                "region_cm1": list(f.region_cm1) if f.region_cm1 else None,
+            }
+            for f in findings
+        ],
+    }
 
 
 # -- text for people ----------------------------------------------------------------------------------------------
@@ -224,18 +282,26 @@ def report_of(examined: Examined, paint: Painter) -> str:
     """A small table that a chemist reads at a terminal."""
     document = examined.document
     title = printable(str(document["title"] or "(no title)"))
-    lines = [paint(f"{printable(str(document['file']))}  block {document['block']}  {title}", "strong"),
-             paint("A trial look: not a record.", "faint")]
+    lines = [
+        paint(f"{printable(str(document['file']))}  block {document['block']}  {title}", "strong"),
+        paint("A trial look: not a record.", "faint"),
+    ]
     if document["status"] == "refused":
         problem = document["problem"]
         place = f" (line {problem['line']})" if problem["line"] else ""
-        return "\n".join([lines[0], paint(f"  REFUSED  {printable(problem['message'])}{place}  [{problem['code']}]", "bad")])
+        return "\n".join(
+            [lines[0], paint(f"  REFUSED  {printable(problem['message'])}{place}  [{problem['code']}]", "bad")]
+        )
     axis, ordinate, noise = document["axis"], document["ordinate"], document["noise_absorbance"]
-    lines.append(f"  {axis['last_cm1']:.0f} to {axis['first_cm1']:.0f} cm-1, {axis['points']} points, read as "
-                 f"{ordinate['used']}; noise {'unknown' if noise is None else f'{noise:.2g} absorbance'}")
+    lines.append(
+        f"  {axis['last_cm1']:.0f} to {axis['first_cm1']:.0f} cm-1, {axis['points']} points, read as "
+        f"{ordinate['used']}; noise {'unknown' if noise is None else f'{noise:.2g} absorbance'}"
+    )
     for finding in document["findings"]:
         if finding["severity"] != "info":
-            lines.append(paint(f"  ! {printable(finding['message'])}", "bad" if finding["severity"] == "serious" else "open"))
+            lines.append(
+                paint(f"  ! {printable(finding['message'])}", "bad" if finding["severity"] == "serious" else "open")
+            )
     lines += _band_lines(document, paint) + _group_lines(examined, paint)
     if "identity" in document:
         lines += _identity_lines(examined, paint)
@@ -251,8 +317,10 @@ def _band_lines(document: dict[str, object], paint: Painter) -> list[str]:
     shown = sorted(sorted(bands, key=lambda b: -b["prominence_absorbance"])[:24], key=lambda b: -b["position_cm1"])
     for band in shown:
         mark = "  saturated" if band["kind"] == "saturated" else ""
-        lines.append(f"  {band['position_cm1']:7.1f}  {band['height_absorbance']:8.4f}  {band['fwhm_cm1']:6.0f}  "
-                     f"{band['intensity']:<4}  {band['shape']:<10}  {band['snr']:6.0f}{mark}")
+        lines.append(
+            f"  {band['position_cm1']:7.1f}  {band['height_absorbance']:8.4f}  {band['fwhm_cm1']:6.0f}  "
+            f"{band['intensity']:<4}  {band['shape']:<10}  {band['snr']:6.0f}{mark}"
+        )
     rest = len(bands) - len(shown)
     if rest or shoulders:
         lines.append(paint(f"  and {rest} smaller bands and {shoulders} shoulders (all of them with --json)", "faint"))
@@ -262,8 +330,11 @@ def _band_lines(document: dict[str, object], paint: Painter) -> list[str]:
 def _group_lines(examined: Examined, paint: Painter) -> list[str]:
     claims = examined.result.groups if examined.result else ()
     lines = [""]
-    for verdict, word, colour in (("supported", "supported", "good"), ("contradicted", "against the declaration", "bad"),
-                                  ("undecided", "undecided", "open")):
+    for verdict, word, colour in (
+        ("supported", "supported", "good"),
+        ("contradicted", "against the declaration", "bad"),
+        ("undecided", "undecided", "open"),
+    ):
         chosen = [c for c in claims if c.verdict == verdict]
         if verdict == "contradicted":
             chosen = [c for c in chosen if c.agrees == "no"]
@@ -284,7 +355,10 @@ def _group_lines(examined: Examined, paint: Painter) -> list[str]:
 def _identity_lines(examined: Examined, paint: Painter) -> list[str]:
     identity = examined.result.identity
     colour = {"yes": "good", "no": "bad", "neutral": "open"}[identity.agrees]
-    lines = ["", f"  identity against {printable(identity.reference)}: {paint(identity.verdict.replace('_', ' '), colour)}"]
+    lines = [
+        "",
+        f"  identity against {printable(identity.reference)}: {paint(identity.verdict.replace('_', ' '), colour)}",
+    ]
     lines += [f"      + {sentence}" for sentence in identity.for_]
     lines += [f"      - {sentence}" for sentence in identity.against]
     return lines

@@ -77,8 +77,12 @@ def bench_plot(
     masked = list(result.get("masked") or ())
     figures = [
         _spectrum_figure(
-            columns=columns, bands=_band_columns(result.get("bands") or (), x_cm1, columns["y"]), masked=masked,
-            x_range=x_range, show=show, has_x_labels="residual" not in wanted,
+            columns=columns,
+            bands=_band_columns(result.get("bands") or (), x_cm1, columns["y"]),
+            masked=masked,
+            x_range=x_range,
+            show=show,
+            has_x_labels="residual" not in wanted,
         )
     ]
     if "residual" in wanted:
@@ -153,9 +157,19 @@ def _base_figure(*, x_range: Any, y_range: Any, frame_height_px: int, y_title: s
         WheelZoomTool(name="wheel", dimensions="width", modifiers={"ctrl": True}),
     ]
     plot = figure(
-        x_range=x_range, y_range=y_range, tools=tools, toolbar_location=None, frame_height=frame_height_px,
-        sizing_mode="stretch_width", min_border_left=LEFT_BORDER_PX, min_border_right=18, min_border_top=8,
-        min_border_bottom=8, background_fill_color=None, border_fill_color=None, outline_line_color=None,
+        x_range=x_range,
+        y_range=y_range,
+        tools=tools,
+        toolbar_location=None,
+        frame_height=frame_height_px,
+        sizing_mode="stretch_width",
+        min_border_left=LEFT_BORDER_PX,
+        min_border_right=18,
+        min_border_top=8,
+        min_border_bottom=8,
+        background_fill_color=None,
+        border_fill_color=None,
+        outline_line_color=None,
         output_backend="canvas",
     )
     plot.toolbar.logo = None
@@ -193,8 +207,16 @@ def _shade_regions(plot: Any, *, masked: Sequence[Mapping[str, Any]], x_range: A
     def label(text: str, x_cm1: float) -> None:
         plot.add_layout(
             Label(
-                x=x_cm1, y=top_px, y_units="screen", text=text, x_offset=5, text_baseline="top", text_color=INK_QUIET,
-                text_font=FONT, text_font_size="11.5px", level="annotation",
+                x=x_cm1,
+                y=top_px,
+                y_units="screen",
+                text=text,
+                x_offset=5,
+                text_baseline="top",
+                text_color=INK_QUIET,
+                text_font=FONT,
+                text_font_size="11.5px",
+                level="annotation",
             )
         )
 
@@ -202,7 +224,12 @@ def _shade_regions(plot: Any, *, masked: Sequence[Mapping[str, Any]], x_range: A
         edge_cm1 = min(FINGERPRINT_BELOW_CM1, high_cm1)
         plot.add_layout(
             BoxAnnotation(
-                name="fingerprint", left=low_cm1, right=edge_cm1, fill_color=SHADE, fill_alpha=0.75, line_color=None,
+                name="fingerprint",
+                left=low_cm1,
+                right=edge_cm1,
+                fill_color=SHADE,
+                fill_alpha=0.75,
+                line_color=None,
                 level="image",
             )
         )
@@ -214,8 +241,16 @@ def _shade_regions(plot: Any, *, masked: Sequence[Mapping[str, Any]], x_range: A
             continue
         plot.add_layout(
             BoxAnnotation(
-                name="masked", left=left, right=right, fill_color=MASKED, fill_alpha=0.55, line_color=None,
-                hatch_pattern="right_diagonal_line", hatch_color="#a9b1c0", hatch_alpha=0.6, hatch_scale=7,
+                name="masked",
+                left=left,
+                right=right,
+                fill_color=MASKED,
+                fill_alpha=0.55,
+                line_color=None,
+                hatch_pattern="right_diagonal_line",
+                hatch_color="#a9b1c0",
+                hatch_alpha=0.6,
+                hatch_scale=7,
                 level="underlay",
             )
         )
@@ -258,13 +293,26 @@ def _spectrum_figure(
             plot.line("x", name, source=source, name=name, **style)
             tips.append((f"{name} @{name}{{0.0000}}", str(style["line_color"])))
     plot.scatter(
-        "x", "y", source=ColumnDataSource(data=bands, name="bands"), size=4, marker="circle", fill_color=INK,
-        line_color="#ffffff", line_width=1, name="bands",
+        "x",
+        "y",
+        source=ColumnDataSource(data=bands, name="bands"),
+        size=4,
+        marker="circle",
+        fill_color=INK,
+        line_color="#ffffff",
+        line_width=1,
+        name="bands",
     )
     plot.add_tools(
         HoverTool(
-            renderers=[trace], mode="vline", line_policy="nearest", point_policy="snap_to_data", tooltips=_tip(tips),
-            attachment="horizontal", show_arrow=False, visible=False,
+            renderers=[trace],
+            mode="vline",
+            line_policy="nearest",
+            point_policy="snap_to_data",
+            tooltips=_tip(tips),
+            attachment="horizontal",
+            show_arrow=False,
+            visible=False,
         )
     )
     return plot
@@ -276,21 +324,31 @@ def _residual_figure(x: np.ndarray, residual: np.ndarray, *, masked: Sequence[Ma
     low, high = _span(residual)
     room = high - low
     plot = _base_figure(
-        x_range=x_range, y_range=Range1d(start=low - 0.1 * room, end=high + 0.1 * room),
-        frame_height_px=RESIDUAL_HEIGHT_PX, y_title="residual / A", has_x_labels=True,
+        x_range=x_range,
+        y_range=Range1d(start=low - 0.1 * room, end=high + 0.1 * room),
+        frame_height_px=RESIDUAL_HEIGHT_PX,
+        y_title="residual / A",
+        has_x_labels=True,
     )
     plot.name = "residual"
     _shade_regions(plot, masked=masked, x_range=x_range, labelled=False)
     plot.add_layout(Span(location=0.0, dimension="width", line_color="#8b95a7", line_width=1))
     trace = plot.line(
-        "x", "y", source=ColumnDataSource(data={"x": x, "y": residual}, name="residual"), line_color=RESIDUAL,
-        line_width=1.1, name="residual",
+        "x",
+        "y",
+        source=ColumnDataSource(data={"x": x, "y": residual}, name="residual"),
+        line_color=RESIDUAL,
+        line_width=1.1,
+        name="residual",
     )
     plot.add_tools(
         HoverTool(
-            renderers=[trace], mode="vline",
-            tooltips=_tip([("@x{0.0} cm⁻¹", INK), ("residual @y{0.0000} A", RESIDUAL)]), attachment="horizontal",
-            show_arrow=False, visible=False,
+            renderers=[trace],
+            mode="vline",
+            tooltips=_tip([("@x{0.0} cm⁻¹", INK), ("residual @y{0.0000} A", RESIDUAL)]),
+            attachment="horizontal",
+            show_arrow=False,
+            visible=False,
         )
     )
     return plot

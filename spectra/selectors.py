@@ -1,4 +1,4 @@
-"""Reads of the spectra layer. Nothing here writes; lists come with what their pages show, so no page asks row by row."""
+"""Reads of the spectra layer. Nothing here writes; lists come with what their pages show: no page asks row by row."""
 
 from __future__ import annotations
 
@@ -69,7 +69,9 @@ def accessory_for(technique: str, accessory_id: int | None) -> Accessory | None:
     if accessory_id is not None:
         accessory = in_service.filter(pk=accessory_id).first()
         if accessory is None:
-            raise BadInput("accessory.unknown", "That accessory does not exist or is out of service.", field="accessory")
+            raise BadInput(
+                "accessory.unknown", "That accessory does not exist or is out of service.", field="accessory"
+            )
         if accessory.technique != technique:
             raise BadInput(
                 "accessory.other_technique",
@@ -134,7 +136,9 @@ def materials() -> QuerySet[Material]:
 
 def approved_material_versions() -> QuerySet[MaterialVersion]:
     return (
-        MaterialVersion.objects.filter(state=ApprovalState.APPROVED).select_related("material").order_by("name", "number")
+        MaterialVersion.objects.filter(state=ApprovalState.APPROVED)
+        .select_related("material")
+        .order_by("name", "number")
     )
 
 
@@ -180,7 +184,7 @@ def sample(pk: int) -> Sample:
 
 
 def find_samples(*, text: str = "", before_pk: int | None = None, limit: int = 50) -> list[Sample]:
-    """Samples whose number, lot, supplier or declared name begins with or contains the words, newest first, keyset pages."""
+    """Samples whose number, lot, supplier or declared name contains each of the words; newest first, keyset pages."""
     rows = Sample.objects.select_related("delivery__material_version__material").prefetch_related("examinations")
     for word in text.split():
         rows = rows.filter(
@@ -228,9 +232,13 @@ def spectrum(pk: int) -> Spectrum:
 
 
 def analysis(pk: int) -> Analysis:
-    row = Analysis.objects.select_related(
-        "spectrum__examination", "spectrum__upload__raw_file", "method", "group_table", "reference"
-    ).filter(pk=pk).first()
+    row = (
+        Analysis.objects.select_related(
+            "spectrum__examination", "spectrum__upload__raw_file", "method", "group_table", "reference"
+        )
+        .filter(pk=pk)
+        .first()
+    )
     if row is None:
         raise NotVisible("analysis.unknown", "There is no such analysis.")
     return row
@@ -241,7 +249,9 @@ def unfinished_analyses() -> QuerySet[Analysis]:
 
 
 def references() -> QuerySet[Reference]:
-    return Reference.objects.select_related("material", "author", "approved_by", "raw_file", "instrument").order_by("code")
+    return Reference.objects.select_related("material", "author", "approved_by", "raw_file", "instrument").order_by(
+        "code"
+    )
 
 
 def reference(pk: int) -> Reference:
@@ -342,12 +352,16 @@ def expiring_soon(*, days: int = 30) -> list[Expiring]:
     until = timezone.now().date() + timedelta(days=days)
     found = []
     for row in Reference.objects.filter(state=ApprovalState.APPROVED, superseded_by__isnull=True):
-        for on, words in ((row.standard_expires_on, "standard"), (row.spectrum_valid_until, "spectrum of the standard")):
+        for on, words in (
+            (row.standard_expires_on, "standard"),
+            (row.spectrum_valid_until, "spectrum of the standard"),
+        ):
             if on is not None and on <= until:
                 why = "Outside its validity a reference carries no verdict."
                 found.append(Expiring(str(row), words, on, why, "spectra:reference", (row.pk,)))
     for instrument in Instrument.objects.filter(in_service=True).prefetch_related("qualifications"):
-        due = max((q.due_on for q in instrument.qualifications.all()), default=None)
+        newest = max(instrument.qualifications.all(), key=lambda q: (q.performed_on, q.pk), default=None)
+        due = newest.due_on if newest else None
         if due is not None and due <= until:
             why = "Qualify it, or take it out of service."
             found.append(Expiring(instrument.code, "qualification", due, why, "spectra:instrument", (instrument.pk,)))

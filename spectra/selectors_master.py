@@ -5,13 +5,13 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
-from datetime import datetime
+from datetime import date, datetime
 from functools import lru_cache
 from pathlib import Path
 
 from django.conf import settings
 from django.db import models
-from django.db.models import Prefetch, QuerySet
+from django.db.models import OuterRef, Prefetch, Q, QuerySet, Subquery
 from django.utils import timezone
 
 from labsite.accounts.models import User, fold_username
@@ -31,6 +31,7 @@ from spectra.models import (
     MaterialVersion,
     MethodVersion,
     Procedure,
+    Qualification,
     RawFile,
     Reference,
     Upload,
@@ -115,14 +116,19 @@ def group_table_in_force() -> GroupTable | None:
     return group_tables().filter(state=ApprovalState.APPROVED).first()
 
 
-def parsed(row: GroupTable) -> group_table.GroupTable:
-    return computing.parsed_table(row.digest, row.text)
+def parsed(row: GroupTable) -> group_table.GroupTable | None:
+    """The table behind a version's text; None where this version of the program cannot read an older text any more."""
+    try:
+        return computing.parsed_table(row.digest, row.text)
+    except CoreError:
+        return None
 
 
 def groups_to_choose() -> list[tuple[str, str]]:
     """(identifier, name) of the groups of the approved table; empty while no table is approved."""
     row = group_table_in_force()
-    return [(group.id, group.name) for group in parsed(row).groups] if row else []
+    table = parsed(row) if row else None
+    return [(group.id, group.name) for group in table.groups] if table else []
 
 
 @lru_cache(maxsize=1)
@@ -198,8 +204,9 @@ def structure_facts(text: str) -> StructureFacts:
     try:
         drawn = structure.check_smiles(text)
         row = group_table_in_force()
-        names = dict(groups_to_choose())
-        found = structure.expected_groups(text, parsed(row)) if row else ()
+        table = parsed(row) if row else None
+        names = {group.id: group.name for group in table.groups} if table else {}
+        found = structure.expected_groups(text, table) if table else ()
     except CoreError as error:
         return StructureFacts(None, problem=f"{error.problem.message} {error.problem.remedy}".strip())
     return StructureFacts(drawn, tuple(names.get(group, group) for group in found))
@@ -259,6 +266,19 @@ def watch_list(pk: int) -> WatchList:
     return _or_404(watch_lists(), pk, "watch list")
 
 
+def find_references(text: str) -> QuerySet[Reference]:
+    """References whose code, name, material or lot of the standard holds every word."""
+    rows = selectors.references()
+    for word in text.split():
+        rows = rows.filter(
+            Q(code__icontains=word)
+            | Q(name__icontains=word)
+            | Q(standard_lot__icontains=word)
+            | Q(material__code__icontains=word)
+        )
+    return rows
+
+
 def references_to_choose() -> QuerySet[Reference]:
     """Approved references that no later one replaced."""
     return selectors.references().filter(state=ApprovalState.APPROVED, superseded_by=None)
@@ -288,27 +308,57 @@ def raw_file(sha256: str) -> tuple[str, bytes]:
 # Instruments
 
 
-def instruments() -> list[Instrument]:
-    """Every instrument with its accessories, each with its last check, and its qualifications, the newest first."""
-    rows = list(Instrument.objects.order_by("code").prefetch_related("qualifications", "accessories"))
-    for row in rows:
-        _with_checks(row)
-    return rows
+@dataclass(frozen=True)
+class AccessoryState:
+    accessory: Accessory
+    last_check: InstrumentCheck | None
 
 
-def instrument(pk: int) -> Instrument:
-    row = _or_404(Instrument.objects.prefetch_related("qualifications__recorded_by", "accessories"), pk, "instrument")
-    _with_checks(row)
-    return row
+@dataclass(frozen=True)
+class InstrumentState:
+    """An instrument with its accessories and their last checks; its qualifications, the newest first."""
+
+    instrument: Instrument
+    accessories: tuple[AccessoryState, ...]
+    qualifications: tuple[Qualification, ...]
+
+    @property
+    def requalify_on(self) -> date | None:
+        """When the newest qualification says that the next one is due."""
+        return self.qualifications[0].due_on if self.qualifications else None
 
 
-def _with_checks(row: Instrument) -> None:
-    now = timezone.now()
-    row.accessory_rows = sorted(row.accessories.all(), key=lambda accessory: accessory.code)
-    for accessory in row.accessory_rows:
-        accessory.last_check = selectors.check_in_force(accessory, at=now)
-    row.qualification_rows = sorted(row.qualifications.all(), key=lambda found: found.performed_on, reverse=True)
-    row.requalify_on = row.qualification_rows[0].due_on if row.qualification_rows else None
+def instruments() -> list[InstrumentState]:
+    return _states(Instrument.objects.order_by("code"))
+
+
+def instrument(pk: int) -> InstrumentState:
+    states = _states(Instrument.objects.filter(pk=pk))
+    if not states:
+        raise NotVisible("instrument.unknown", "There is no such instrument.")
+    return states[0]
+
+
+def _states(rows: QuerySet[Instrument]) -> list[InstrumentState]:
+    last_check = InstrumentCheck.objects.filter(accessory=OuterRef("pk"), performed_at__lte=timezone.now())
+    accessories = Accessory.objects.order_by("code").annotate(
+        last_check_pk=Subquery(last_check.order_by("-performed_at", "-pk").values("pk")[:1])
+    )
+    qualifications = Qualification.objects.select_related("recorded_by").order_by("-performed_on", "-pk")
+    found = list(
+        rows.prefetch_related(Prefetch("accessories", accessories), Prefetch("qualifications", qualifications))
+    )
+    checks = InstrumentCheck.objects.in_bulk(
+        [accessory.last_check_pk for row in found for accessory in row.accessories.all() if accessory.last_check_pk]
+    )
+    return [
+        InstrumentState(
+            row,
+            tuple(AccessoryState(one, checks.get(one.last_check_pk)) for one in row.accessories.all()),
+            tuple(row.qualifications.all()),
+        )
+        for row in found
+    ]
 
 
 def instruments_in_service() -> QuerySet[Instrument]:

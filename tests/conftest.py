@@ -11,6 +11,7 @@ from pathlib import Path
 # No test touches the folder of a real laboratory: neither here nor in a process that a test starts.
 _VAR = Path(tempfile.mkdtemp(prefix="bandledger-tests-"))
 os.environ["BANDLEDGER_VAR"] = str(_VAR)
+os.environ.setdefault("BANDLEDGER_NO_VENV", "1")  # a command that a test runs uses this interpreter
 os.environ.setdefault("DJANGO_SETTINGS_MODULE", "labsite.settings")
 
 import pytest  # noqa: E402

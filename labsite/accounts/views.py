@@ -39,6 +39,11 @@ def refused(form: forms.Form, error: DomainError) -> None:
     form.add_error(field if field in form.fields else None, text)
 
 
+def _answer(form: forms.Form, status: int) -> int:
+    """The status of a page with `form`: where the form itself refused what was typed, nothing else has set one."""
+    return BadInput.status if form.errors and status == 200 else status
+
+
 @login_not_required
 @sensitive_post_parameters("password")
 @require_http_methods(["GET", "POST"])
@@ -50,7 +55,7 @@ def sign_in(request: HttpRequest) -> HttpResponse:
         wanted = ""
     if request.user.is_authenticated:
         return redirect(wanted or "home")
-    form, status = SignInForm(request.POST or None), 200
+    form, status = SignInForm(request.POST if request.method == "POST" else None), 200
     if form.is_valid():
         try:
             sessions.sign_in(request, **form.cleaned_data)
@@ -64,7 +69,7 @@ def sign_in(request: HttpRequest) -> HttpResponse:
         "ended": ENDED.get(request.GET.get("ended", ""), ""),
         "nobody_yet": not selectors.anybody(),
     }
-    return render(request, "accounts/sign_in.html", context, status=status)
+    return render(request, "accounts/sign_in.html", context, status=_answer(form, status))
 
 
 @login_not_required
@@ -85,7 +90,7 @@ def profile(request: HttpRequest) -> HttpResponse:
 @require_http_methods(["GET", "POST"])
 def change_password(request: HttpRequest) -> HttpResponse:
     shortest = settings.AUTH_PASSWORD_VALIDATORS[0]["OPTIONS"]["min_length"]
-    form, status = ChangePasswordForm(request.POST or None, shortest=shortest), 200
+    form, status = ChangePasswordForm(request.POST if request.method == "POST" else None, shortest=shortest), 200
     if form.is_valid():
         try:
             prove_password(
@@ -104,7 +109,7 @@ def change_password(request: HttpRequest) -> HttpResponse:
             sessions.start(request, user)
             messages.success(request, "Your password was changed. Your other sessions have ended.")
             return redirect("accounts:profile")
-    return render(request, "accounts/change_password.html", {"form": form}, status=status)
+    return render(request, "accounts/change_password.html", {"form": form}, status=_answer(form, status))
 
 
 @require_safe
@@ -120,7 +125,7 @@ def people(request: HttpRequest) -> HttpResponse:
 @require_http_methods(["GET", "POST"])
 @administrators_only
 def new_person(request: HttpRequest) -> HttpResponse:
-    form, status = NewPersonForm(request.POST or None), 200
+    form, status = NewPersonForm(request.POST if request.method == "POST" else None), 200
     if form.is_valid():
         try:
             user, password = services.create_user(by=request.user, **form.cleaned_data)
@@ -128,7 +133,7 @@ def new_person(request: HttpRequest) -> HttpResponse:
         except (BadInput, NotPossible) as error:
             refused(form, error)
             status = error.status
-    return render(request, "accounts/new_person.html", {"form": form}, status=status)
+    return render(request, "accounts/new_person.html", {"form": form}, status=_answer(form, status))
 
 
 @require_safe
@@ -232,7 +237,7 @@ def _show_password(request: HttpRequest, user: User, password: str) -> HttpRespo
 @require_http_methods(["GET", "POST"])
 @page_for(Role.QA_MANAGER, Role.LAB_ADMINISTRATOR)
 def small_laboratory(request: HttpRequest) -> HttpResponse:
-    form, status = ReasonForm(request.POST or None), 200
+    form, status = ReasonForm(request.POST if request.method == "POST" else None), 200
     allowed = selectors.small_laboratory()
     if form.is_valid():
         try:
@@ -248,4 +253,4 @@ def small_laboratory(request: HttpRequest) -> HttpResponse:
         "history": selectors.setting_history(settings.SMALL_LABORATORY_KEY),
         "may_set": request.user.has_role(Role.QA_MANAGER),
     }
-    return render(request, "accounts/small_laboratory.html", context, status=status)
+    return render(request, "accounts/small_laboratory.html", context, status=_answer(form, status))

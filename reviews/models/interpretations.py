@@ -184,9 +184,7 @@ class Decision(models.Model):
 
     class Meta:
         constraints = [
-            models.CheckConstraint(
-                condition=~Q(verdict="rejected") | ~Q(reasons=[]), name="rejection_has_a_reason"
-            )
+            models.CheckConstraint(condition=~Q(verdict="rejected") | ~Q(reasons=[]), name="rejection_has_a_reason")
         ]
 
 

@@ -8,17 +8,17 @@ from django.contrib import messages
 from django.http import HttpRequest, HttpResponse, JsonResponse
 from django.shortcuts import redirect, render
 from django.urls import reverse
-from django.views.decorators.http import require_GET, require_POST
+from django.views.decorators.http import require_GET, require_http_methods, require_POST
 
 from labsite.accounts.permissions import page_for
-from labsite.errors import BadInput, DomainError, NotPossible
+from labsite.errors import BadInput, NotPossible
 from labsite.policy import plot_page
 from labsite.signing import services as signing
 from labsite.signing.forms import SignatureForm
-from reviews import presenting, selectors
+from reviews import permissions, presenting, selectors
 from reviews.models import Claim, ClaimKind, InterpretationVersion
 from reviews.services import drafts
-from reviews.transitions import State
+from reviews.transitions import Action, State
 from reviews.views.receiving import add_error
 from reviews.words import VERDICTS
 from spectra import arrays, plots, store
@@ -203,9 +203,7 @@ def confirm_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
 def change_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
     typed = {"verdict": request.POST.get("verdict", ""), "reason": request.POST.get("reason", "")}
     try:
-        claim = drafts.change_claim(
-            version_id=pk, claim_id=claim_pk, by=request.user, edits=_edits(request), **typed
-        )
+        claim = drafts.change_claim(version_id=pk, claim_id=claim_pk, by=request.user, edits=_edits(request), **typed)
     except BadInput as error:
         row = selectors.version(pk)
         claim = next((claim for claim in row.claims.all() if claim.pk == claim_pk), None)
@@ -280,17 +278,17 @@ def write_conclusion(request: HttpRequest, pk: int) -> HttpResponse:
 
 
 @page_for(*spectra_permissions.READERS)
+@require_http_methods(["GET", "POST"])
 def submit(request: HttpRequest, pk: int) -> HttpResponse:
     """Read once more what will be signed; sign."""
     row = selectors.version(pk)
+    permissions.require(request.user, row, Action.SUBMIT)
     points, _document, content_hash = drafts.preview(row)
-    form = SignatureForm(request.POST or None)
-    if request.method == "POST" and form.is_valid():
+    form = SignatureForm(request.POST if request.method == "POST" else None)
+    if form.is_valid():
         try:
             proof = signing.prove(request, password=form.cleaned_data["password"])
-            drafts.submit(
-                version_id=pk, by=request.user, proof=proof, content_hash=form.cleaned_data["content_hash"]
-            )
+            drafts.submit(version_id=pk, by=request.user, proof=proof, content_hash=form.cleaned_data["content_hash"])
         except BadInput as error:
             add_error(form, error)
         else:

@@ -7,15 +7,14 @@ from django.contrib import messages
 from django.http import HttpRequest, HttpResponse
 from django.shortcuts import redirect, render
 from django.urls import reverse
-from django.views.decorators.http import require_GET, require_POST
+from django.views.decorators.http import require_GET, require_http_methods, require_POST
 
 from labsite.accounts.permissions import page_for
 from labsite.errors import BadInput, DomainError
-from reviews import presenting, selectors
+from reviews import permissions, presenting, selectors
 from reviews.forms import AnswerForm, DeliveryForm, RoleForm, UploadForm
 from reviews.services import drafts
 from reviews.transitions import Action
-from reviews import permissions
 from spectra import permissions as spectra_permissions
 from spectra import selectors as spectra_selectors
 from spectra.models import Examination, Sample
@@ -50,6 +49,7 @@ def samples(request: HttpRequest) -> HttpResponse:
 
 
 @page_for(*spectra_permissions.READERS)
+@require_http_methods(["GET", "POST"])
 def register_delivery(request: HttpRequest) -> HttpResponse:
     spectra_permissions.require_analyst(request.user)
     if request.method == "POST":
@@ -242,7 +242,9 @@ def upload(request: HttpRequest, pk: int) -> HttpResponse:
                 examination_id=pk, by=request.user, file_name=file.name or "", data=file.read(), facts=facts
             )
         except (BadInput, DomainError) as error:
-            refused.append({"file": uploads.clean_file_name(file.name or ""), "message": error.message, "remedy": error.remedy})
+            refused.append(
+                {"file": uploads.clean_file_name(file.name or ""), "message": error.message, "remedy": error.remedy}
+            )
             continue
         if brought.state == "refused":
             refused.append(

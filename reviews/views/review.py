@@ -96,8 +96,9 @@ def _review_page(
         "approve": _approve(row, blockers, approve) if deciding else None,
         "reject": _reject(row, points, reject) if deciding else None,
         "withdraw": _withdraw(row, withdraw) if permissions.may(user, row, Action.WITHDRAW) else None,
-        "revise_url": reverse("reviews:revise", args=[row.pk]) if permissions.may(user, row, Action.REVISE)
-        and not row.revisions.exists() else "",
+        "revise_url": reverse("reviews:revise", args=[row.pk])
+        if permissions.may(user, row, Action.REVISE) and not row.revisions.exists()
+        else "",
         "decision": presenting.decision_note(row),
         "trail_url": reverse("trail:record", args=["examination", examination.pk]),
     }
@@ -256,11 +257,11 @@ def settle_point(request: HttpRequest, pk: int, point_pk: int) -> HttpResponse:
 @require_POST
 def approve(request: HttpRequest, pk: int) -> HttpResponse:
     row = selectors.version(pk)
+    permissions.require(request.user, row, Action.APPROVE)
     form = SignatureForm(request.POST, prefix="approve")
     comment = request.POST.get("comment", "")
     if form.is_valid():
         try:
-            permissions.require(request.user, row, Action.APPROVE)
             proof = signing.prove(request, password=form.cleaned_data["password"])
             reviewing.approve(
                 version_id=pk,
@@ -282,6 +283,7 @@ def approve(request: HttpRequest, pk: int) -> HttpResponse:
 @require_POST
 def reject(request: HttpRequest, pk: int) -> HttpResponse:
     row = selectors.version(pk)
+    permissions.require(request.user, row, Action.REJECT)
     form = SignatureForm(request.POST, prefix="reject")
     keys = {point.pk: point.key for point in row.points.all()}
     typed = {point_pk: request.POST.get(f"reason-{point_pk}", "") for point_pk in keys}
@@ -293,7 +295,6 @@ def reject(request: HttpRequest, pk: int) -> HttpResponse:
         given["errors"] = {"reasons": "Give at least one reason: the analyst has to know what to mend."}
     elif form.is_valid():
         try:
-            permissions.require(request.user, row, Action.REJECT)
             proof = signing.prove(request, password=form.cleaned_data["password"])
             reviewing.reject(
                 version_id=pk,
@@ -315,6 +316,7 @@ def reject(request: HttpRequest, pk: int) -> HttpResponse:
 @require_POST
 def withdraw(request: HttpRequest, pk: int) -> HttpResponse:
     row = selectors.version(pk)
+    permissions.require(request.user, row, Action.WITHDRAW)
     form = SignatureForm(request.POST, prefix="withdraw")
     reason = request.POST.get("reason", "")
     given: dict[str, object] = {"form": form, "reason": reason}
@@ -322,7 +324,6 @@ def withdraw(request: HttpRequest, pk: int) -> HttpResponse:
         given["errors"] = {"reason": "Say why the approved version is withdrawn."}
     elif form.is_valid():
         try:
-            permissions.require(request.user, row, Action.WITHDRAW)
             proof = signing.prove(request, password=form.cleaned_data["password"])
             reviewing.withdraw(
                 version_id=pk,

@@ -164,7 +164,11 @@ def _overrides() -> dict[str, object]:
         )
         for claim in selectors.overrides()
     ]
-    return {"title": "Where analysts differ from the computation", "rows": rows, "empty": "No computed verdict was changed."}
+    return {
+        "title": "Where analysts differ from the computation",
+        "rows": rows,
+        "empty": "No computed verdict was changed.",
+    }
 
 
 def _trail_status() -> dict[str, object]:

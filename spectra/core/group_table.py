@@ -13,12 +13,58 @@ from dataclasses import dataclass
 from spectra.core.errors import CoreError
 
 GROUP_IDS = (
-    "alkane_ch", "alkene", "alkyne", "nitrile", "aromatic", "alcohol_oh", "phenol_oh", "ether", "epoxide", "aldehyde",
-    "ketone", "ester", "lactone", "carboxylic_acid", "carboxylate", "anhydride", "acid_chloride", "carbonate_ester",
-    "urethane", "amide", "imide", "amine_primary", "amine_secondary", "nitro", "isocyanate", "azide", "cyanide_ion",
-    "nitrate_ester", "ammonium", "urea", "lactam", "sulfonyl_chloride", "peroxide", "thiol", "sulfoxide", "sulfone",
-    "sulfonamide", "sulfonate", "sulfate", "c_f", "c_cl", "c_br_i", "silicone", "silicate", "mineral_oh", "phosphoryl",
-    "phosphate", "carbonate_ion", "nitrate_ion", "polyol", "water", "carbon_dioxide",
+    "alkane_ch",
+    "alkene",
+    "alkyne",
+    "nitrile",
+    "aromatic",
+    "alcohol_oh",
+    "phenol_oh",
+    "ether",
+    "epoxide",
+    "aldehyde",
+    "ketone",
+    "ester",
+    "lactone",
+    "carboxylic_acid",
+    "carboxylate",
+    "anhydride",
+    "acid_chloride",
+    "carbonate_ester",
+    "urethane",
+    "amide",
+    "imide",
+    "amine_primary",
+    "amine_secondary",
+    "nitro",
+    "isocyanate",
+    "azide",
+    "cyanide_ion",
+    "nitrate_ester",
+    "ammonium",
+    "urea",
+    "lactam",
+    "sulfonyl_chloride",
+    "peroxide",
+    "thiol",
+    "sulfoxide",
+    "sulfone",
+    "sulfonamide",
+    "sulfonate",
+    "sulfate",
+    "c_f",
+    "c_cl",
+    "c_br_i",
+    "silicone",
+    "silicate",
+    "mineral_oh",
+    "phosphoryl",
+    "phosphate",
+    "carbonate_ion",
+    "nitrate_ion",
+    "polyol",
+    "water",
+    "carbon_dioxide",
 )
 CLASS_IDS = ("carbonyl", "oh_or_nh", "carbon_oxygen_single", "unsaturated_carbon", "halogenated")
 ROLES = ("diagnostic", "companion", "supporting")
@@ -29,10 +75,36 @@ STATUSES = ("confirmed", "memory")
 LIMITS_CM1 = (150.0, 5000.0)
 LARGEST_TABLE_CHARACTERS = 400_000
 
-_GROUP_KEYS = {"id", "name", "classes", "prior", "smarts", "hazard", "would_decide", "note", "needs", "implies", "one_band_only",
-               "never_decidable", "bands"}
-_BAND_KEYS = {"name", "role", "set", "kind", "condensed", "gas", "strength", "width_cm1", "gas_width_cm1", "absence",
-              "source", "status", "dominant"}
+_GROUP_KEYS = {
+    "id",
+    "name",
+    "classes",
+    "prior",
+    "smarts",
+    "hazard",
+    "would_decide",
+    "note",
+    "needs",
+    "implies",
+    "one_band_only",
+    "never_decidable",
+    "bands",
+}
+_BAND_KEYS = {
+    "name",
+    "role",
+    "set",
+    "kind",
+    "condensed",
+    "gas",
+    "strength",
+    "width_cm1",
+    "gas_width_cm1",
+    "absence",
+    "source",
+    "status",
+    "dominant",
+}
 
 
 @dataclass(frozen=True)
@@ -124,17 +196,24 @@ def load(text: str) -> GroupTable:
     Raises CoreError (code `group_table.*`) naming the group and the band row of the first mistake.
     """
     if len(text) > LARGEST_TABLE_CHARACTERS:
-        raise CoreError("group_table.too_long", f"The table holds more than {LARGEST_TABLE_CHARACTERS} characters.",
-                        remedy="Remove what is not a group row.")
+        raise CoreError(
+            "group_table.too_long",
+            f"The table holds more than {LARGEST_TABLE_CHARACTERS} characters.",
+            remedy="Remove what is not a group row.",
+        )
     try:
         data = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
-        raise CoreError("group_table.syntax", f"The table is not valid TOML: {error}.",
-                        remedy="Correct the line that is named.") from error
+        raise CoreError(
+            "group_table.syntax", f"The table is not valid TOML: {error}.", remedy="Correct the line that is named."
+        ) from error
     unknown = set(data) - {"version", "title", "group", "class", "molecule"}
     if unknown:
-        raise CoreError("group_table.key", f"The table has an unknown key: {sorted(unknown)[0]}.",
-                        remedy="Use only version, title, group, class and molecule.")
+        raise CoreError(
+            "group_table.key",
+            f"The table has an unknown key: {sorted(unknown)[0]}.",
+            remedy="Use only version, title, group, class and molecule.",
+        )
     version = data.get("version")
     if not isinstance(version, str) or not version.strip():
         raise CoreError("group_table.version", "The table names no version.", remedy='Add version = "...".')
@@ -149,8 +228,11 @@ def load(text: str) -> GroupTable:
     for i, item in enumerate(groups, start=1):
         for need in (*item.needs, *item.implies):
             if need not in seen:
-                raise _mistake(f"group {i} ({item.id})", f"it names {need}, which the table does not hold",
-                               "Add that group or take the name away.")
+                raise _mistake(
+                    f"group {i} ({item.id})",
+                    f"it names {need}, which the table does not hold",
+                    "Add that group or take the name away.",
+                )
     classes = tuple(_class(i, row, groups) for i, row in enumerate(_rows(data, "class"), start=1))
     molecules = tuple(_molecule(i, row) for i, row in enumerate(_rows(data, "molecule"), start=1))
     digest = hashlib.sha256(text.replace("\r\n", "\n").replace("\r", "\n").encode("utf-8", "replace")).hexdigest()
@@ -160,7 +242,9 @@ def load(text: str) -> GroupTable:
 def _rows(data: Mapping[str, object], key: str) -> list[Mapping[str, object]]:
     rows = data.get(key, [])
     if not isinstance(rows, list) or not all(isinstance(row, dict) for row in rows):
-        raise CoreError("group_table.rows", f"{key} has to be a list of tables.", remedy=f"Write [[{key}]] before each.")
+        raise CoreError(
+            "group_table.rows", f"{key} has to be a list of tables.", remedy=f"Write [[{key}]] before each."
+        )
     return rows
 
 
@@ -201,27 +285,44 @@ def _group(number: int, row: Mapping[str, object]) -> Group:
     if not decide:
         raise _mistake(place, "would_decide is empty", "Name at least one test that would decide.")
     return Group(
-        id=str(identifier), name=str(row.get("name", identifier)), classes=classes, prior=float(prior),
-        smarts=_texts(place, row, "smarts"), bands=rows, would_decide=decide, hazard=row.get("hazard") or None,
-        note=str(row.get("note", "")), needs=_texts(place, row, "needs"),
+        id=str(identifier),
+        name=str(row.get("name", identifier)),
+        classes=classes,
+        prior=float(prior),
+        smarts=_texts(place, row, "smarts"),
+        bands=rows,
+        would_decide=decide,
+        hazard=row.get("hazard") or None,
+        note=str(row.get("note", "")),
+        needs=_texts(place, row, "needs"),
         implies=_texts(place, row, "implies"),
-        one_band_only=bool(row.get("one_band_only", False)), never_decidable=never)
+        one_band_only=bool(row.get("one_band_only", False)),
+        never_decidable=never,
+    )
 
 
 def _pair(place: str, row: Mapping[str, object], key: str, limits: tuple[float, float]) -> tuple[float, float] | None:
     value = row.get(key)
     if value is None:
         return None
-    good = isinstance(value, list) and len(value) == 2 and all(
-        isinstance(v, (int, float)) and not isinstance(v, bool) for v in value)
+    good = (
+        isinstance(value, list)
+        and len(value) == 2
+        and all(isinstance(v, (int, float)) and not isinstance(v, bool) for v in value)
+    )
     if not good:
         raise _mistake(place, f"{key} has to be two numbers", "Write [low, high] in cm-1.")
     low, high = float(value[0]), float(value[1])
     if not low < high:
-        raise _mistake(place, f"{key} runs from {low:g} to {high:g}, the wrong way round", "Put the lower number first.")
+        raise _mistake(
+            place, f"{key} runs from {low:g} to {high:g}, the wrong way round", "Put the lower number first."
+        )
     if low < limits[0] or high > limits[1]:
-        raise _mistake(place, f"{key} {low:g}-{high:g} lies outside {limits[0]:g}-{limits[1]:g} cm-1",
-                       "Enter wavenumbers of the mid-infrared.")
+        raise _mistake(
+            place,
+            f"{key} {low:g}-{high:g} lies outside {limits[0]:g}-{limits[1]:g} cm-1",
+            "Enter wavenumbers of the mid-infrared.",
+        )
     return low, high
 
 
@@ -248,13 +349,20 @@ def _band(place: str, row: Mapping[str, object], *, is_molecule: bool = False) -
     if not is_molecule and (not isinstance(source, str) or not source):
         raise _mistake(place, "it names no source", "Name the source, or handbooks with status memory.")
     return BandRow(
-        name=name, role="diagnostic" if is_molecule else _choice(place, row, "role", ROLES, None),
-        strength=_choice(place, row, "strength", STRENGTHS, None), condensed=condensed, gas=gas,
-        set=str(row.get("set", "")), kind=_choice(place, row, "kind", KINDS, "band"), width_cm1=width,
+        name=name,
+        role="diagnostic" if is_molecule else _choice(place, row, "role", ROLES, None),
+        strength=_choice(place, row, "strength", STRENGTHS, None),
+        condensed=condensed,
+        gas=gas,
+        set=str(row.get("set", "")),
+        kind=_choice(place, row, "kind", KINDS, "band"),
+        width_cm1=width,
         gas_width_cm1=_pair(place, row, "gas_width_cm1", (0.0, 2000.0)) or (0.0, 1000.0),
-        absence="counts" if is_molecule else _choice(place, row, "absence", ABSENCES, None), source=str(source),
+        absence="counts" if is_molecule else _choice(place, row, "absence", ABSENCES, None),
+        source=str(source),
         status="memory" if is_molecule else _choice(place, row, "status", STATUSES, None),
-        dominant=bool(row.get("dominant", False)))
+        dominant=bool(row.get("dominant", False)),
+    )
 
 
 def _class(number: int, row: Mapping[str, object], groups: tuple[Group, ...]) -> WiderClass:
@@ -273,5 +381,7 @@ def _molecule(number: int, row: Mapping[str, object]) -> Molecule:
     bands = row.get("bands", [])
     if not isinstance(row.get("id"), str) or not isinstance(bands, list) or not bands:
         raise _mistake(place, "it needs an id and bands", "Complete the row.")
-    return Molecule(str(row["id"]), tuple(
-        _band(f"{place}, band {i}", band, is_molecule=True) for i, band in enumerate(bands, start=1)))
+    return Molecule(
+        str(row["id"]),
+        tuple(_band(f"{place}, band {i}", band, is_molecule=True) for i, band in enumerate(bands, start=1)),
+    )

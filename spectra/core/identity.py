@@ -11,12 +11,15 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from spectra.core import atmosphere, bands as band_picking
+from spectra.core import atmosphere
+from spectra.core import bands as band_picking
 from spectra.core.errors import CoreError
 from spectra.core.params import MethodParams
 from spectra.core.preparation import degrade
 from spectra.core.results import Band, BandDifference, Identity, Metric, Prepared
 from spectra.core.types import Conditions, Finding, Phase, frozen_array
+
+MASK_LIMIT_CM1 = 2000.0  # a saturated C-H stretch alone does not hinder a comparison
 
 FORMULAS = {
     "signed_root_derivative": "Pearson r of sign(d) sqrt(|d|), d = dA/dnu",
@@ -51,7 +54,8 @@ def pearson(a: np.ndarray, b: np.ndarray) -> float:
     """Cosine of the mean-centred vectors. Raises CoreError where one of them is constant."""
     da, db = np.asarray(a) - np.mean(a), np.asarray(b) - np.mean(b)
     if np.linalg.norm(da) <= 1e-12 * max(1.0, np.linalg.norm(a)) or np.linalg.norm(db) <= 1e-12 * max(
-            1.0, np.linalg.norm(b)):
+        1.0, np.linalg.norm(b)
+    ):
         raise CoreError("score.flat", "A constant spectrum has no correlation.", remedy="Check the region.")
     return cosine(da, db)
 
@@ -88,7 +92,9 @@ def incomparable(first: Conditions, second: Conditions) -> list[str]:
 
 def _same_phase(first: Phase, second: Phase) -> bool:
     # A film may be cast from a solid or spread from a liquid; every other change of phase moves bands.
-    return first is second or Phase.FILM in (first, second) and {first, second} <= {Phase.FILM, Phase.SOLID, Phase.LIQUID}
+    return first is second or (
+        Phase.FILM in (first, second) and {first, second} <= {Phase.FILM, Phase.SOLID, Phase.LIQUID}
+    )
 
 
 def pair_up(sample: Prepared, reference: Prepared, params: MethodParams, least_resolution_cm1: float) -> Pair:
@@ -100,8 +106,11 @@ def pair_up(sample: Prepared, reference: Prepared, params: MethodParams, least_r
     low = max(sample.x_cm1[0], reference.x_cm1[0])
     high = min(sample.x_cm1[-1], reference.x_cm1[-1])
     if high - low < 100 * step:
-        raise CoreError("identity.no_overlap", "The two spectra have no common range worth comparing.",
-                        remedy="Measure both over the same range.")
+        raise CoreError(
+            "identity.no_overlap",
+            "The two spectra have no common range worth comparing.",
+            remedy="Measure both over the same range.",
+        )
     resolution = max(least_resolution_cm1, sample.resolution_cm1, reference.resolution_cm1)
     grid = low + step * np.arange(int((high - low) / step) + 1)
     own, other = _lowered(sample, resolution), _lowered(reference, resolution)
@@ -112,8 +121,11 @@ def pair_up(sample: Prepared, reference: Prepared, params: MethodParams, least_r
     edge = resolution
     usable &= (grid > low + edge) & (grid < high - edge)
     if usable.sum() < 100:
-        raise CoreError("identity.no_overlap", "Too little of the two spectra can be read in both.",
-                        remedy="Measure a thinner specimen over the full range.")
+        raise CoreError(
+            "identity.no_overlap",
+            "Too little of the two spectra can be read in both.",
+            remedy="Measure a thinner specimen over the full range.",
+        )
     shift = _best_shift(grid, a, reference.x_cm1, other, usable, params.identity_shift_cm1)
     b = np.interp(grid - shift, reference.x_cm1, other)
     weight = a[usable] @ b[usable] / max(float(b[usable] @ b[usable]), 1e-30)
@@ -126,7 +138,9 @@ def _lowered(prepared: Prepared, resolution: float) -> np.ndarray:
     return degrade(prepared.smooth, prepared.step_cm1, present, max(resolution, present))
 
 
-def _best_shift(grid: np.ndarray, a: np.ndarray, x: np.ndarray, b: np.ndarray, usable: np.ndarray, most: float) -> float:
+def _best_shift(
+    grid: np.ndarray, a: np.ndarray, x: np.ndarray, b: np.ndarray, usable: np.ndarray, most: float
+) -> float:
     da = np.diff(a)
     keep = usable[:-1] & usable[1:]
     best, best_score = 0.0, -2.0
@@ -144,8 +158,12 @@ def metrics_of(pair: Pair, params: MethodParams) -> tuple[Metric, ...]:
     limit = params.fingerprint_limit_cm1
     treatment = f"baseline removed, {pair.resolution_cm1:g} cm-1, masks and carbon dioxide left out"
     result = []
-    for name, low, high in (("signed_root_derivative", 0.0, limit), ("correlation", 0.0, limit),
-                            ("derivative_correlation", 0.0, 9999.0), ("correlation", 0.0, 9999.0)):
+    for name, low, high in (
+        ("signed_root_derivative", 0.0, limit),
+        ("correlation", 0.0, limit),
+        ("derivative_correlation", 0.0, 9999.0),
+        ("correlation", 0.0, 9999.0),
+    ):
         inside = pair.usable & (pair.x_cm1 >= low) & (pair.x_cm1 <= high)
         if inside.sum() < 40:
             continue
@@ -161,8 +179,15 @@ def metrics_of(pair: Pair, params: MethodParams) -> tuple[Metric, ...]:
             continue
         label = f"{name}_{'fingerprint' if high == limit else 'whole'}"
         result.append(Metric(label, value, FORMULAS[name], region, treatment))
-    result.append(Metric("axis_shift_cm1", pair.shift_cm1, FORMULAS["axis_shift_cm1"],
-                         (float(pair.x_cm1[0]), float(pair.x_cm1[-1])), treatment))
+    result.append(
+        Metric(
+            "axis_shift_cm1",
+            pair.shift_cm1,
+            FORMULAS["axis_shift_cm1"],
+            (float(pair.x_cm1[0]), float(pair.x_cm1[-1])),
+            treatment,
+        )
+    )
     return tuple(result)
 
 
@@ -171,8 +196,14 @@ def main_score(metrics: tuple[Metric, ...]) -> float | None:
     return next((m.value for m in metrics if m.name == "signed_root_derivative_fingerprint"), None)
 
 
-def compare(sample: Prepared, sample_conditions: Conditions, reference: Prepared, reference_conditions: Conditions,
-            reference_name: str, params: MethodParams) -> tuple[Identity, Pair | None]:
+def compare(
+    sample: Prepared,
+    sample_conditions: Conditions,
+    reference: Prepared,
+    reference_conditions: Conditions,
+    reference_name: str,
+    params: MethodParams,
+) -> tuple[Identity, Pair | None]:
     """Verdict on identity with its ledger; the pair is None where nothing could be laid over one another."""
     reasons = incomparable(sample_conditions, reference_conditions)
     reasons += _unfit(sample, "sample") + _unfit(reference, "reference")
@@ -184,8 +215,10 @@ def compare(sample: Prepared, sample_conditions: Conditions, reference: Prepared
     fingerprint = (pair.x_cm1 >= 700) & (pair.x_cm1 <= limit)
     covered = float(pair.usable[fingerprint].sum()) * (pair.x_cm1[1] - pair.x_cm1[0]) / (limit - 700)
     if covered < 1 - params.identity_masked_share:
-        reasons.append(f"Only {100 * min(covered, 1):.0f} % of the fingerprint region can be read in both "
-                       f"(range and saturation); {100 * (1 - params.identity_masked_share):.0f} % are needed.")
+        reasons.append(
+            f"Only {100 * min(covered, 1):.0f} % of the fingerprint region can be read in both "
+            f"(range and saturation); {100 * (1 - params.identity_masked_share):.0f} % are needed."
+        )
     metrics = metrics_of(pair, params)
     score = main_score(metrics)
     if score is None:
@@ -193,6 +226,15 @@ def compare(sample: Prepared, sample_conditions: Conditions, reference: Prepared
     if reasons:
         return replace(_refused(reasons, reference_name), metrics=metrics), pair
     tally = _concordance(sample, reference, pair, params)
+    if tally.masked_weight > params.identity_masked_share:
+        refused = _refused(
+            [
+                f"Total absorption hides {100 * tally.masked_weight:.0f} % of the reference's band heights below "
+                f"{MASK_LIMIT_CM1:.0f} cm-1."
+            ],
+            reference_name,
+        )
+        return replace(refused, metrics=metrics), pair
     return _verdict(tally, metrics, float(score), reference_name, sample_conditions, reference_conditions, params), pair
 
 
@@ -204,8 +246,20 @@ def _unfit(prepared: Prepared, which: str) -> list[str]:
 
 
 def _refused(reasons: list[str], name: str) -> Identity:
-    return Identity("cannot_be_compared", "neutral", name, "cannot be weighed", (), tuple(reasons),
-                    ("Measure the sample and an approved reference in the same way.",), (), 0, (), (), ())
+    return Identity(
+        "cannot_be_compared",
+        "neutral",
+        name,
+        "cannot be weighed",
+        (),
+        tuple(reasons),
+        ("Measure the sample and an approved reference in the same way.",),
+        (),
+        0,
+        (),
+        (),
+        (),
+    )
 
 
 @dataclass(frozen=True)
@@ -219,32 +273,41 @@ class _Tally:
     large_extra: int
     found_weight: float  # found share of the demanded bands, each weighted by its height
     extra_weight: float  # height of the extra bands as a share of all the sample's
+    masked_weight: float  # height of the reference's bands below MASK_LIMIT_CM1 that masks keep from being compared
 
 
 def _concordance(sample: Prepared, reference: Prepared, pair: Pair, params: MethodParams) -> _Tally:
     """Reference bands looked for in the sample and the other way round, on the common resolution."""
     own = _bands_on(pair, pair.sample, sample, params)
     other = _bands_on(pair, pair.reference, reference, params)
-    own_top = max((b.height_absorbance for b in own), default=0.0)
-    other_top = max((b.height_absorbance for b in other), default=0.0)
+    own_top = max((b.height_absorbance for b in own if not _beside_a_mask(b, pair, params)), default=0.0)
+    other_top = max((b.height_absorbance for b in other if not _beside_a_mask(b, pair, params)), default=0.0)
     noise = float(np.median(sample.noise))
     noise_reference = float(np.median(reference.noise)) * pair.scale
     missing, ratios = [], []
     demanded = found = large_missing = 0
-    demanded_height = found_height = 0.0
+    demanded_height = found_height = masked_height = low_height = 0.0
     for band in other:
-        if band.kind == "shoulder" or band.height_absorbance < params.identity_band_level * other_top \
-                or band.prominence_absorbance < 10 * max(noise, noise_reference) \
-                or band.prominence_absorbance < 0.25 * params.identity_band_level * other_top:
+        if (
+            band.kind == "shoulder"
+            or band.height_absorbance < params.identity_band_level * other_top
+            or band.prominence_absorbance < 10 * max(noise, noise_reference)
+            or band.prominence_absorbance < 0.25 * params.identity_band_level * other_top
+        ):
             continue
         if _beside_a_mask(band, pair, params):
+            masked_height += band.height_absorbance if band.position_cm1 < MASK_LIMIT_CM1 else 0.0
             continue
+        low_height += band.height_absorbance if band.position_cm1 < MASK_LIMIT_CM1 else 0.0
         demanded += 1
         demanded_height += band.height_absorbance
         match = _match(band, own, params)
         if match is None:
-            missing.append(BandDifference(band.position_cm1, band.height_absorbance,
-                                          snr=band.height_absorbance / max(noise, 1e-12)))
+            missing.append(
+                BandDifference(
+                    band.position_cm1, band.height_absorbance, snr=band.height_absorbance / max(noise, 1e-12)
+                )
+            )
             large_missing += band.height_absorbance >= params.medium_level * other_top
             continue
         found += 1
@@ -255,9 +318,12 @@ def _concordance(sample: Prepared, reference: Prepared, pair: Pair, params: Meth
     large_extra = 0
     own_height = extra_height = 0.0
     for band in own:
-        if band.kind == "shoulder" or band.height_absorbance < params.identity_extra_level * own_top \
-                or band.prominence_absorbance < max(10 * max(noise, noise_reference),
-                                                    0.5 * params.identity_extra_level * own_top):
+        if (
+            band.kind == "shoulder"
+            or band.height_absorbance < params.identity_extra_level * own_top
+            or band.prominence_absorbance
+            < max(10 * max(noise, noise_reference), 0.5 * params.identity_extra_level * own_top)
+        ):
             continue
         if _beside_a_mask(band, pair, params):
             continue
@@ -272,12 +338,23 @@ def _concordance(sample: Prepared, reference: Prepared, pair: Pair, params: Meth
         for band, match, ratio in ratios:
             relative = ratio / max(middle, 1e-12)
             if band.height_absorbance >= 0.1 * other_top and not (
-                    1 / params.identity_size_ratio <= relative <= params.identity_size_ratio):
-                outliers.append(BandDifference(match.position_cm1, match.height_absorbance, snr=match.snr,
-                                               ratio=relative))
-    return _Tally(demanded, found, tuple(missing), tuple(extra), tuple(outliers), large_missing, large_extra,
-                  found_height / demanded_height if demanded_height > 0 else 0.0,
-                  extra_height / own_height if own_height > 0 else 0.0)
+                1 / params.identity_size_ratio <= relative <= params.identity_size_ratio
+            ):
+                outliers.append(
+                    BandDifference(match.position_cm1, match.height_absorbance, snr=match.snr, ratio=relative)
+                )
+    return _Tally(
+        demanded,
+        found,
+        tuple(missing),
+        tuple(extra),
+        tuple(outliers),
+        large_missing,
+        large_extra,
+        found_height / demanded_height if demanded_height > 0 else 0.0,
+        extra_height / own_height if own_height > 0 else 0.0,
+        masked_height / (masked_height + low_height) if masked_height > 0 else 0.0,
+    )
 
 
 def _beside_a_mask(band: Band, pair: Pair, params: MethodParams) -> bool:
@@ -289,9 +366,20 @@ def _beside_a_mask(band: Band, pair: Pair, params: MethodParams) -> bool:
 
 def _bands_on(pair: Pair, trace: np.ndarray, origin: Prepared, params: MethodParams) -> tuple[Band, ...]:
     scale = pair.scale if trace is pair.reference else 1.0
-    view = replace(origin, x_cm1=pair.x_cm1, smooth=trace, usable=pair.usable, unreliable=~pair.usable, masks=(),
-                   noise=np.interp(pair.x_cm1, origin.x_cm1, origin.noise) * scale, resolution_cm1=pair.resolution_cm1,
-                   findings=_atmosphere_only(origin.findings))
+    # Bands under a mask are picked, too: they are set aside by name further on instead of vanishing.
+    everywhere = np.ones(len(pair.x_cm1), dtype=bool)
+    view = replace(
+        origin,
+        x_cm1=pair.x_cm1,
+        smooth=trace,
+        corrected=trace,
+        usable=everywhere,
+        unreliable=~pair.usable,
+        masks=(),
+        noise=np.interp(pair.x_cm1, origin.x_cm1, origin.noise) * scale,
+        resolution_cm1=pair.resolution_cm1,
+        findings=_atmosphere_only(origin.findings),
+    )
     return band_picking.pick(view, params)
 
 
@@ -307,15 +395,26 @@ def _match(band: Band, others: tuple[Band, ...], params: MethodParams) -> Band |
     return min(near, key=lambda b: (b.kind == "shoulder", abs(b.position_cm1 - band.position_cm1)))
 
 
-def _verdict(tally: _Tally, metrics: tuple[Metric, ...], score: float, name: str, sample_conditions: Conditions,
-             reference_conditions: Conditions, params: MethodParams) -> Identity:
+def _verdict(
+    tally: _Tally,
+    metrics: tuple[Metric, ...],
+    score: float,
+    name: str,
+    sample_conditions: Conditions,
+    reference_conditions: Conditions,
+    params: MethodParams,
+) -> Identity:
     share = tally.found / tally.demanded if tally.demanded else 0.0
     for_, against = [], []
-    for_.append(f"{tally.found} of {tally.demanded} reference bands are in the sample, within "
-                f"{params.identity_window_cm1:g} cm-1 and a share of their width.")
+    for_.append(
+        f"{tally.found} of {tally.demanded} reference bands are in the sample, within "
+        f"{params.identity_window_cm1:g} cm-1 and a share of their width."
+    )
     limit = params.fingerprint_limit_cm1
-    line = f"Signed-root derivative correlation below {limit:.0f} cm-1 is {score:.3f} " \
-           f"(consistent from {params.identity_consistent_score:.2f})."
+    line = (
+        f"Signed-root derivative correlation below {limit:.0f} cm-1 is {score:.3f} "
+        f"(consistent from {params.identity_consistent_score:.2f})."
+    )
     (for_ if score >= params.identity_consistent_score else against).append(line)
     for what, items in (("Missing", tally.missing), ("Extra", tally.extra), ("Size differs", tally.outliers)):
         if items:
@@ -327,17 +426,43 @@ def _verdict(tally: _Tally, metrics: tuple[Metric, ...], score: float, name: str
     differences = len(tally.missing) + len(tally.extra) + len(tally.outliers)
     if tally.demanded == 0:
         return _refused(["The reference shows no band above noise and size limits."], name)
-    if score >= params.identity_consistent_score and share >= params.identity_found_share and tally.large_missing == 0 \
-            and tally.large_extra == 0 and not tally.extra and len(tally.outliers) <= max(1, tally.demanded // 10):
+    if (
+        score >= params.identity_consistent_score
+        and share >= params.identity_found_share
+        and tally.large_missing == 0
+        and tally.large_extra == 0
+        and not tally.extra
+        and len(tally.outliers) <= max(1, tally.demanded // 10)
+    ):
         verdict, agrees, weight = "consistent", "yes", "strong" if differences == 0 else "good"
-    elif score >= params.identity_different_score and tally.found_weight >= params.identity_found_weight \
-            and tally.extra_weight <= 1 - params.identity_found_weight:
+    elif (
+        score >= params.identity_different_score
+        and tally.found_weight >= params.identity_found_weight
+        and tally.extra_weight <= 1 - params.identity_found_weight
+    ):
         verdict, agrees, weight = "consistent_with_differences", "neutral", "open"
     else:
         verdict, agrees = "not_consistent", "no"
         weight = "strong" if score < 0.4 else "good"
-    would = () if verdict == "consistent" else (
-        "Repeat sample and reference from the same solvent, prepared in the same way.",
-        "Measure today's reference beside the sample on the same instrument.")
-    return Identity(verdict, agrees, name, weight, tuple(for_), tuple(against), would, metrics, tally.demanded,
-                    tally.missing, tally.extra, tally.outliers)
+    would = (
+        ()
+        if verdict == "consistent"
+        else (
+            "Repeat sample and reference from the same solvent, prepared in the same way.",
+            "Measure today's reference beside the sample on the same instrument.",
+        )
+    )
+    return Identity(
+        verdict,
+        agrees,
+        name,
+        weight,
+        tuple(for_),
+        tuple(against),
+        would,
+        metrics,
+        tally.demanded,
+        tally.missing,
+        tally.extra,
+        tally.outliers,
+    )

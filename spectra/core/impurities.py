@@ -2,8 +2,8 @@
 
 The sample is fitted with the reference and everything that may differ between two measurements of one material: a
 baseline, shift and width (derivatives of the reference), and intensity tilt and curvature (reference times wavenumber,
-reference squared). A component is judged by what it adds outside that space. Decision and detection limit are kept apart
-(Currie 1968): the first decides, the second says what would hardly be missed.
+reference squared). A component is judged by what it adds outside that space. Decision and detection limit are kept
+apart (Currie 1968): the first decides, the second says what would hardly be missed.
 """
 
 from __future__ import annotations
@@ -87,12 +87,18 @@ def correlation_length(residual: np.ndarray, most: int) -> float:
     return total
 
 
-def screen(sample: Prepared, sample_conditions: Conditions, reference: Prepared, reference_conditions: Conditions,
-           watch: tuple[Candidate, ...], params: MethodParams) -> tuple[Impurities | None, tuple[Pair, np.ndarray] | None]:
+def screen(
+    sample: Prepared,
+    sample_conditions: Conditions,
+    reference: Prepared,
+    reference_conditions: Conditions,
+    watch: tuple[Candidate, ...],
+    params: MethodParams,
+) -> tuple[Impurities | None, tuple[Pair, np.ndarray] | None]:
     """Screening of one sample; also the pair and the residual on its grid (NaN where masked) for the plot.
 
-    The result is None when the two spectra have no common range. Conditions that cannot be compared, or a reference that
-    does not explain the sample, refuse every claim and say why.
+    The result is None when the two spectra have no common range. Conditions that cannot be compared, or a reference
+    that does not explain the sample, refuse every claim and say why.
     """
     reasons = incomparable(sample_conditions, reference_conditions)
     try:
@@ -102,23 +108,35 @@ def screen(sample: Prepared, sample_conditions: Conditions, reference: Prepared,
     fit = _Fit.of(sample, reference, pair, params)
     notes: list[str] = list(reasons)
     if fit.explained_variance < params.explained_variance:
-        notes.append(f"The reference explains {100 * fit.explained_variance:.1f} % of the sample, less than "
-                     f"{100 * params.explained_variance:.0f} %: the declared material itself is in doubt, or another "
-                     "component dominates; no impurity is named.")
+        notes.append(
+            f"The reference explains {100 * fit.explained_variance:.1f} % of the sample, less than "
+            f"{100 * params.explained_variance:.0f} %: the declared material itself is in doubt, or another "
+            "component dominates; no impurity is named."
+        )
     judged = [_prepare_candidate(item, sample_conditions, pair, fit, params) for item in watch]
     solved = _solve(fit, [j for j in judged if j.column is not None], params)
     smallest = _smallest_claim(solved.structured_fraction, params)
     if smallest > params.impurity_floor_fraction:
-        notes.append(f"After the fit {100 * solved.structured_fraction:.2f} % of the peak height is left over with "
-                     f"structure, as between two instruments; nothing below {100 * smallest:.0f} % is claimed.")
-    notes.append("Screening reaches roughly per cent to tenths of a per cent; it shows neither purity nor the absence of "
-                 "trace substances.")
+        notes.append(
+            f"After the fit {100 * solved.structured_fraction:.2f} % of the peak height is left over with "
+            f"structure, as between two instruments; nothing below {100 * smallest:.0f} % is claimed."
+        )
+    notes.append(
+        "Screening reaches roughly per cent to tenths of a per cent; it shows neither purity nor the absence of "
+        "trace substances."
+    )
     refused = " ".join(notes[:-1]) if reasons or fit.explained_variance < params.explained_variance else ""
     screened = tuple(_judge(item, solved, smallest, refused, params) for item in judged)
     unexplained = () if refused and reasons else _unexplained(fit, solved, smallest, params)
     residual = np.where(pair.usable, solved.residual_full, np.nan)
-    return Impurities(screened, unexplained, fit.explained_variance, solved.structured_fraction,
-                      None if refused else smallest, tuple(notes)), (pair, residual)
+    return Impurities(
+        screened,
+        unexplained,
+        fit.explained_variance,
+        solved.structured_fraction,
+        None if refused else smallest,
+        tuple(notes),
+    ), (pair, residual)
 
 
 @dataclass
@@ -147,8 +165,9 @@ class _Fit:
         second = np.gradient(first, step)
         third = np.gradient(second, step)
         fourth = np.gradient(third, step)
-        columns = np.column_stack([polynomials, material, first, second, third, fourth, material * u, material * u**2,
-                                   material**2])
+        columns = np.column_stack(
+            [polynomials, material, first, second, third, fourth, material * u, material * u**2, material**2]
+        )
         noise = np.maximum(np.interp(x, sample.x_cm1, sample.noise), 1e-9)
         noise = np.hypot(noise, np.interp(x, reference.x_cm1, reference.noise) * pair.scale)
         # Reproducibility of height and position, in proportion to the material's own signal and slope.
@@ -170,8 +189,17 @@ class _Fit:
         rest = y - full @ solution
         explained = 1 - float(rest @ rest) / max(float(flat @ flat), 1e-30)
         peak = float(material[rows].max())
-        return cls(pair, rows, sigma, basis, columns, values, max(peak, 1e-12), explained,
-                   float(np.median(noise)) / max(peak, 1e-12))
+        return cls(
+            pair,
+            rows,
+            sigma,
+            basis,
+            columns,
+            values,
+            max(peak, 1e-12),
+            explained,
+            float(np.median(noise)) / max(peak, 1e-12),
+        )
 
     def outside(self, weighted: np.ndarray) -> np.ndarray:
         """The part of weighted columns or values that the nuisance space cannot make."""
@@ -187,8 +215,9 @@ class _Judged:
     reason: str = ""
 
 
-def _prepare_candidate(item: Candidate, sample_conditions: Conditions, pair: Pair, fit: _Fit,
-                       params: MethodParams) -> _Judged:
+def _prepare_candidate(
+    item: Candidate, sample_conditions: Conditions, pair: Pair, fit: _Fit, params: MethodParams
+) -> _Judged:
     reasons = incomparable(sample_conditions, item.conditions)
     x = pair.x_cm1
     source = item.prepared
@@ -206,8 +235,14 @@ def _prepare_candidate(item: Candidate, sample_conditions: Conditions, pair: Pai
     if reasons:
         return _Judged(item, None, shape, seen, " ".join(reasons))
     if seen < 0.2:
-        return _Judged(item, None, shape, seen, f"Only {100 * seen:.0f} % of its signal lies where this spectrum can be "
-                                                "read (range, saturation, carbon dioxide).")
+        return _Judged(
+            item,
+            None,
+            shape,
+            seen,
+            f"Only {100 * seen:.0f} % of its signal lies where this spectrum can be "
+            "read (range, saturation, carbon dioxide).",
+        )
     column = fit.outside(shape[fit.rows] / fit.sigma[fit.rows]) * fit.peak
     return _Judged(item, column, shape, seen)
 
@@ -256,7 +291,9 @@ def _solve(fit: _Fit, judged: list[_Judged], params: MethodParams) -> _Solved:
     removed = fit.pair.sample - (np.column_stack(shapes) @ np.array(amounts) if shapes else 0.0)
     residual_full = removed - design @ _one_sided_fit(design[fit.rows], removed[fit.rows], fit.sigma[fit.rows])
     plain = residual_full[fit.rows]
-    structured = math.sqrt(max(float(plain @ plain) / len(plain) - (fit.noise_fraction * fit.peak) ** 2, 0.0)) / fit.peak
+    structured = (
+        math.sqrt(max(float(plain @ plain) / len(plain) - (fit.noise_fraction * fit.peak) ** 2, 0.0)) / fit.peak
+    )
     return _Solved(estimates, sigmas, left, residual_full, spread, length, structured)
 
 
@@ -289,8 +326,21 @@ def _judge(item: _Judged, solved: _Solved, smallest: float, refused: str, params
     name = item.candidate.name
 
     def unseen(reason: str) -> Screened:
-        return Screened(name, "cannot_be_seen", "neutral", None, None, None, None, None, SCALE, "cannot be weighed", (),
-                        (reason,), ("A method made for this component, such as chromatography.",))
+        return Screened(
+            name,
+            "cannot_be_seen",
+            "neutral",
+            None,
+            None,
+            None,
+            None,
+            None,
+            SCALE,
+            "cannot be weighed",
+            (),
+            (reason,),
+            ("A method made for this component, such as chromatography.",),
+        )
 
     if item.column is None:
         return unseen(item.reason)
@@ -301,20 +351,51 @@ def _judge(item: _Judged, solved: _Solved, smallest: float, refused: str, params
     decision = max(limits.decision, smallest)
     detection = max(limits.detection, smallest + ONE_SIDED_95 * sigma)
     if detection > params.masked_detection_limit:
-        return unseen(f"Its signal disappears under this material: it would be seen only from {100 * detection:.0f} % of "
-                      "the peak height upwards.")
+        return unseen(
+            f"Its signal disappears under this material: it would be seen only from {100 * detection:.0f} % of "
+            "the peak height upwards."
+        )
     estimate = solved.estimates[name]
     z = estimate / sigma
-    facts = (f"Estimate {100 * estimate:.2f} % of the peak height, standard uncertainty {100 * sigma:.2f} %, "
-             f"{z:.1f} times its uncertainty.")
-    bounds = (f"Decision limit {100 * decision:.2f} %, detection limit {100 * detection:.2f} % of the peak height in this "
-              "spectrum.")
+    facts = (
+        f"Estimate {100 * estimate:.2f} % of the peak height, standard uncertainty {100 * sigma:.2f} %, "
+        f"{z:.1f} times its uncertainty."
+    )
+    bounds = (
+        f"Decision limit {100 * decision:.2f} %, detection limit {100 * detection:.2f} % of the peak height in this "
+        "spectrum."
+    )
     if estimate > decision:
-        return Screened(name, "found", "no", estimate, sigma, z, decision, detection, SCALE,
-                        "strong" if z > 2 * params.impurity_significance else "good", (facts, bounds), (),
-                        ("A method made for this component, such as chromatography.",))
-    return Screened(name, "not_found_above_limit", "yes", estimate, sigma, z, decision, detection, SCALE, "good",
-                    (), (facts, bounds), ())
+        return Screened(
+            name,
+            "found",
+            "no",
+            estimate,
+            sigma,
+            z,
+            decision,
+            detection,
+            SCALE,
+            "strong" if z > 2 * params.impurity_significance else "good",
+            (facts, bounds),
+            (),
+            ("A method made for this component, such as chromatography.",),
+        )
+    return Screened(
+        name,
+        "not_found_above_limit",
+        "yes",
+        estimate,
+        sigma,
+        z,
+        decision,
+        detection,
+        SCALE,
+        "good",
+        (),
+        (facts, bounds),
+        (),
+    )
 
 
 def _unexplained(fit: _Fit, solved: _Solved, smallest: float, params: MethodParams) -> tuple[Unexplained, ...]:

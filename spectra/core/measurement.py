@@ -67,7 +67,7 @@ def stated_resolution_cm1(block: SpectrumBlock, conditions: Conditions) -> float
 
 
 def to_absorbance(block: SpectrumBlock, conditions: Conditions, params: MethodParams) -> Absorbance:
-    """Absorbance by the ordinate and the technique. Reflectance without a known technique is refused with a question."""
+    """Absorbance by ordinate and technique. Reflectance without a known technique is refused with a question."""
     y = np.asarray(block.y, dtype=np.float64)
     x = np.asarray(block.x_cm1, dtype=np.float64)
     findings: list[Finding] = []
@@ -84,10 +84,12 @@ def to_absorbance(block: SpectrumBlock, conditions: Conditions, params: MethodPa
         elif conditions.technique is Technique.DIFFUSE:
             a, formula, relative = kubelka_munk(y), "f(R) = (1 - R)^2 / (2 R)", True
         else:
-            raise CoreError("measurement.reflectance_meaning",
-                            "The ordinate is reflectance, and what that means depends on the technique.",
-                            remedy="State whether it was measured by attenuated or by diffuse reflection.",
-                            question="technique")
+            raise CoreError(
+                "measurement.reflectance_meaning",
+                "The ordinate is reflectance, and what that means depends on the technique.",
+                remedy="State whether it was measured by attenuated or by diffuse reflection.",
+                question="technique",
+            )
     elif ordinate is Ordinate.ABSORPTIVITY:
         a, formula, relative = y.copy(), "proportional to absorbance, strongest point set to 1", True
     else:
@@ -96,10 +98,14 @@ def to_absorbance(block: SpectrumBlock, conditions: Conditions, params: MethodPa
         top = float(np.nanmax(np.abs(a))) if np.isfinite(a).any() else 0.0
         if top > 0:
             a = a / top
-        findings.append(Finding(
-            "measurement.relative_ordinate", Severity.INFO,
-            "The ordinate carries no absolute absorbance; heights are relative to the strongest point, which is 1.",
-            remedy="Judge saturation on the original measurement."))
+        findings.append(
+            Finding(
+                "measurement.relative_ordinate",
+                Severity.INFO,
+                "The ordinate carries no absolute absorbance; heights are relative to the strongest point, which is 1.",
+                remedy="Judge saturation on the original measurement.",
+            )
+        )
     valid = np.isfinite(a)
     a = np.where(valid, np.minimum(a, ABSORBANCE_CEILING), ABSORBANCE_CEILING)
     return Absorbance(x, a, valid, relative, formula, tuple(findings))
@@ -109,23 +115,34 @@ def _transmittance_findings(x_cm1: np.ndarray, t: np.ndarray, params: MethodPara
     findings = []
     dark = t <= 0
     if dark.any():
-        findings.append(Finding(
-            "measurement.no_light", Severity.WARNING,
-            f"{int(dark.sum())} points have a transmittance of zero or below: no light came through.",
-            region_cm1=(float(x_cm1[dark].min()), float(x_cm1[dark].max())),
-            remedy="Measure a thinner or more dilute specimen; the points are not used."))
+        findings.append(
+            Finding(
+                "measurement.no_light",
+                Severity.WARNING,
+                f"{int(dark.sum())} points have a transmittance of zero or below: no light came through.",
+                region_cm1=(float(x_cm1[dark].min()), float(x_cm1[dark].max())),
+                remedy="Measure a thinner or more dilute specimen; the points are not used.",
+            )
+        )
     excess = float(t.max()) - 1
     if excess > params.excess_transmittance:
         where = float(x_cm1[int(np.argmax(t))])
-        findings.append(Finding(
-            "measurement.transmittance_above_one", Severity.WARNING,
-            f"Transmittance reaches {100 * (1 + excess):.1f} % at {where:.0f} cm-1, more than the background let through.",
-            region_cm1=(where - 5, where + 5), remedy="Record a fresh background under the same conditions."))
+        findings.append(
+            Finding(
+                "measurement.transmittance_above_one",
+                Severity.WARNING,
+                f"Transmittance reaches {100 * (1 + excess):.1f} % at {where:.0f} cm-1, "
+                "more than the background let through.",
+                region_cm1=(where - 5, where + 5),
+                remedy="Record a fresh background under the same conditions.",
+            )
+        )
     return findings
 
 
-def noise_windows(x_cm1: np.ndarray, absorbance: np.ndarray, valid: np.ndarray, resolution_cm1: float,
-                  params: MethodParams) -> list[tuple[float, float, float]]:
+def noise_windows(
+    x_cm1: np.ndarray, absorbance: np.ndarray, valid: np.ndarray, resolution_cm1: float, params: MethodParams
+) -> list[tuple[float, float, float]]:
     """(low, high, standard deviation) of a cubic's residual in consecutive windows, before any smoothing.
 
     Points closer than half a resolution element repeat each other (zero filling) and would read too small a noise, so
@@ -156,7 +173,9 @@ def overall_noise(windows: list[tuple[float, float, float]], params: MethodParam
     return float(np.percentile(spread, params.noise_percentile) / params.noise_percentile_ratio)
 
 
-def fringes(x_cm1: np.ndarray, absorbance: np.ndarray, noise: float, params: MethodParams) -> tuple[float, float] | None:
+def fringes(
+    x_cm1: np.ndarray, absorbance: np.ndarray, noise: float, params: MethodParams
+) -> tuple[float, float] | None:
     """(period in cm-1, amplitude) of a sine that runs with one phase through two quiet regions, else None."""
     parts = [(x_cm1 > low) & (x_cm1 < high) for low, high in ((1850.0, 2270.0), (2400.0, 2750.0))]
     if any(part.sum() < 60 for part in parts):
@@ -198,51 +217,86 @@ def range_findings(x_cm1: np.ndarray, params: MethodParams) -> list[Finding]:
         missing.append(f"above {x_cm1[-1]:.0f} cm-1")
     if not missing:
         return []
-    return [Finding("measurement.range", Severity.WARNING,
-                    f"Nothing was recorded {' or '.join(missing)}; groups that absorb there are not examined.",
-                    region_cm1=(float(x_cm1[0]), float(x_cm1[-1])),
-                    remedy="Measure the full range the procedure asks for.")]
+    return [
+        Finding(
+            "measurement.range",
+            Severity.WARNING,
+            f"Nothing was recorded {' or '.join(missing)}; groups that absorb there are not examined.",
+            region_cm1=(float(x_cm1[0]), float(x_cm1[-1])),
+            remedy="Measure the full range the procedure asks for.",
+        )
+    ]
 
 
 def spacing_findings(spacing_cm1: float, resolution_cm1: float | None) -> list[Finding]:
     """Point spacing against the stated resolution."""
     if resolution_cm1 is None:
-        return [Finding("measurement.resolution_unknown", Severity.INFO,
-                        f"No resolution is stated; twice the point spacing ({2 * spacing_cm1:.3g} cm-1) is taken.",
-                        remedy="Enter the resolution with the spectrum.")]
+        return [
+            Finding(
+                "measurement.resolution_unknown",
+                Severity.INFO,
+                f"No resolution is stated; twice the point spacing ({2 * spacing_cm1:.3g} cm-1) is taken.",
+                remedy="Enter the resolution with the spectrum.",
+            )
+        ]
     if spacing_cm1 > resolution_cm1 * 1.05:
-        return [Finding("measurement.coarse_spacing", Severity.WARNING,
-                        f"Points lie {spacing_cm1:.3g} cm-1 apart, wider than the stated resolution of "
-                        f"{resolution_cm1:.3g} cm-1; the data cannot show it.",
-                        remedy="Export without thinning the points.")]
+        return [
+            Finding(
+                "measurement.coarse_spacing",
+                Severity.WARNING,
+                f"Points lie {spacing_cm1:.3g} cm-1 apart, wider than the stated resolution of "
+                f"{resolution_cm1:.3g} cm-1; the data cannot show it.",
+                remedy="Export without thinning the points.",
+            )
+        ]
     if spacing_cm1 < resolution_cm1 / 3:
-        return [Finding("measurement.zero_filled", Severity.INFO,
-                        f"Points lie {spacing_cm1:.3g} cm-1 apart at a resolution of {resolution_cm1:.3g} cm-1: "
-                        "neighbouring points are interpolated and carry no further detail.")]
+        return [
+            Finding(
+                "measurement.zero_filled",
+                Severity.INFO,
+                f"Points lie {spacing_cm1:.3g} cm-1 apart at a resolution of {resolution_cm1:.3g} cm-1: "
+                "neighbouring points are interpolated and carry no further detail.",
+            )
+        ]
     return []
 
 
-def strength_findings(top_absorbance: float, top_cm1: float, noise: float, relative: bool,
-                      params: MethodParams) -> list[Finding]:
+def strength_findings(
+    top_absorbance: float, top_cm1: float, noise: float, relative: bool, params: MethodParams
+) -> list[Finding]:
     """Too weak, too noisy, or fit to read."""
     findings = []
     ratio = top_absorbance / noise if noise > 0 else float("inf")
     if not relative and top_absorbance < params.weak_absorbance:
-        findings.append(Finding(
-            "measurement.too_weak", Severity.WARNING,
-            f"The strongest band reaches only {top_absorbance:.3f} absorbance at {top_cm1:.0f} cm-1; weak bands are lost.",
-            region_cm1=(top_cm1 - 20, top_cm1 + 20),
-            remedy="Use more material, a longer path or better contact."))
+        findings.append(
+            Finding(
+                "measurement.too_weak",
+                Severity.WARNING,
+                f"The strongest band reaches only {top_absorbance:.3f} absorbance at {top_cm1:.0f} cm-1; "
+                "weak bands are lost.",
+                region_cm1=(top_cm1 - 20, top_cm1 + 20),
+                remedy="Use more material, a longer path or better contact.",
+            )
+        )
     if ratio < params.lowest_signal_to_noise:
-        findings.append(Finding(
-            "measurement.too_noisy", Severity.SERIOUS,
-            f"The strongest band stands only {ratio:.0f} times above the noise of {noise:.2g}.",
-            remedy="Add scans and check the light path before anything is concluded."))
+        findings.append(
+            Finding(
+                "measurement.too_noisy",
+                Severity.SERIOUS,
+                f"The strongest band stands only {ratio:.0f} times above the noise of {noise:.2g}.",
+                remedy="Add scans and check the light path before anything is concluded.",
+            )
+        )
     elif ratio < params.low_signal_to_noise:
-        findings.append(Finding(
-            "measurement.noisy", Severity.WARNING,
-            f"The strongest band stands {ratio:.0f} times above the noise of {noise:.2g}; bands below "
-            f"{100 * 6 / ratio:.0f} % of it cannot be told from noise.", remedy="Add scans."))
+        findings.append(
+            Finding(
+                "measurement.noisy",
+                Severity.WARNING,
+                f"The strongest band stands {ratio:.0f} times above the noise of {noise:.2g}; bands below "
+                f"{100 * 6 / ratio:.0f} % of it cannot be told from noise.",
+                remedy="Add scans.",
+            )
+        )
     return findings
 
 
@@ -252,15 +306,21 @@ def baseline_findings(x_cm1: np.ndarray, baseline: np.ndarray, params: MethodPar
     slope = float(np.polyfit(x_cm1, baseline, 1)[0]) * 1000
     if span <= params.steep_baseline_absorbance:
         return []
-    return [Finding("measurement.baseline", Severity.WARNING,
-                    f"The baseline moves over {span:.2f} absorbance (mean slope {slope:+.3f} per 1000 cm-1); "
-                    "areas and the heights of broad bands depend on how it is drawn.",
-                    region_cm1=(float(x_cm1[0]), float(x_cm1[-1])),
-                    remedy="Grind finer, press clearer or take a fresh background.")]
+    return [
+        Finding(
+            "measurement.baseline",
+            Severity.WARNING,
+            f"The baseline moves over {span:.2f} absorbance (mean slope {slope:+.3f} per 1000 cm-1); "
+            "areas and the heights of broad bands depend on how it is drawn.",
+            region_cm1=(float(x_cm1[0]), float(x_cm1[-1])),
+            remedy="Grind finer, press clearer or take a fresh background.",
+        )
+    ]
 
 
-def atmosphere_findings(water: atmosphere.Residue | None, co2: atmosphere.Residue | None, phase: Phase | None,
-                        params: MethodParams) -> list[Finding]:
+def atmosphere_findings(
+    water: atmosphere.Residue | None, co2: atmosphere.Residue | None, phase: Phase | None, params: MethodParams
+) -> list[Finding]:
     """Vapour and carbon dioxide in the light path, of either sign, with their index."""
     findings = []
     severity = Severity.INFO if phase is Phase.GAS else Severity.WARNING
@@ -271,12 +331,17 @@ def atmosphere_findings(water: atmosphere.Residue | None, co2: atmosphere.Residu
         if residue is None or residue.significance < params.vapour_significance:
             continue
         sign = "over-corrected" if residue.amplitude_absorbance < 0 else "not fully removed"
-        findings.append(Finding(
-            code, severity,
-            f"{name} lines are in the spectrum ({sign}; amplitude {residue.amplitude_absorbance:+.4f} absorbance, index "
-            f"{residue.significance:.1f}, lines are named from {params.vapour_significance:.1f}).",
-            region_cm1=region, remedy="Purge longer and record background and sample under the same conditions.",
-            facts={"index": residue.significance, "amplitude_absorbance": residue.amplitude_absorbance}))
+        findings.append(
+            Finding(
+                code,
+                severity,
+                f"{name} lines are in the spectrum ({sign}; amplitude {residue.amplitude_absorbance:+.4f} absorbance, "
+                f"index {residue.significance:.1f}, lines are named from {params.vapour_significance:.1f}).",
+                region_cm1=region,
+                remedy="Purge longer and record background and sample under the same conditions.",
+                facts={"index": residue.significance, "amplitude_absorbance": residue.amplitude_absorbance},
+            )
+        )
     return findings
 
 
@@ -286,9 +351,15 @@ def fringe_findings(found: tuple[float, float] | None, params: MethodParams) -> 
         return []
     period, amplitude = found
     thickness_um = 1e4 / (2 * params.fringe_refractive_index * period)
-    return [Finding("measurement.fringes", Severity.WARNING,
-                    f"Interference fringes with a period of {period:.0f} cm-1 and an amplitude of {amplitude:.4f} "
-                    f"absorbance: a plane-parallel film of about {thickness_um:.0f} um at a refractive index of "
-                    f"{params.fringe_refractive_index:g}.",
-                    region_cm1=(1850.0, 2750.0), remedy="Roughen or tilt the film, or press it between windows.",
-                    facts={"period_cm1": period, "amplitude_absorbance": amplitude, "thickness_um": thickness_um})]
+    return [
+        Finding(
+            "measurement.fringes",
+            Severity.WARNING,
+            f"Interference fringes with a period of {period:.0f} cm-1 and an amplitude of {amplitude:.4f} "
+            f"absorbance: a plane-parallel film of about {thickness_um:.0f} um at a refractive index of "
+            f"{params.fringe_refractive_index:g}.",
+            region_cm1=(1850.0, 2750.0),
+            remedy="Roughen or tilt the film, or press it between windows.",
+            facts={"period_cm1": period, "amplitude_absorbance": amplitude, "thickness_um": thickness_um},
+        )
+    ]

@@ -47,6 +47,7 @@ class MethodParams:
     prominence_in_noise: float = 6.0  # of the smoothed trace, locally
     prominence_floor_of_strongest: float = 0.005
     position_points: int = 9
+    clear_signal_to_noise: float = 50.0
     sharp_width_cm1: float = 15.0
     medium_width_cm1: float = 40.0
     broad_width_cm1: float = 120.0
@@ -69,7 +70,9 @@ class MethodParams:
     explanation_temperature: float = 1.2
     edge_softness_cm1: float = 10.0
     unknown_phase_widening_cm1: float = 10.0
-    contradiction_evidence: float = 1.5  # natural logarithm: what the missing bands themselves must speak against a group
+    contradiction_evidence: float = (
+        1.5  # natural logarithm: what the missing bands themselves must speak against a group
+    )
 
     # identity
     identity_resolution_cm1: float = 8.0
@@ -107,20 +110,33 @@ class MethodParams:
             value = getattr(self, item.name)
             numbers = value if isinstance(value, tuple) else (value,)
             if not all(isinstance(n, (int, float)) and not isinstance(n, bool) and math.isfinite(n) for n in numbers):
-                raise CoreError("params.not_a_number", f"Parameter {item.name} has to be a finite number.",
-                                remedy="Enter a number.")
+                raise CoreError(
+                    "params.not_a_number", f"Parameter {item.name} has to be a finite number.", remedy="Enter a number."
+                )
             if any(n < 0 for n in numbers):
-                raise CoreError("params.negative", f"Parameter {item.name} must not be negative.",
-                                remedy="Enter zero or a positive number.")
+                raise CoreError(
+                    "params.negative",
+                    f"Parameter {item.name} must not be negative.",
+                    remedy="Enter zero or a positive number.",
+                )
         if self.contradiction_probability >= self.support_probability:
-            raise CoreError("params.order", "contradiction_probability has to lie below support_probability.",
-                            remedy="Choose a smaller contradiction_probability.")
+            raise CoreError(
+                "params.order",
+                "contradiction_probability has to lie below support_probability.",
+                remedy="Choose a smaller contradiction_probability.",
+            )
         if not self.unreliable_absorbance <= self.masked_absorbance:
-            raise CoreError("params.order", "unreliable_absorbance must not exceed masked_absorbance.",
-                            remedy="Choose a smaller unreliable_absorbance.")
+            raise CoreError(
+                "params.order",
+                "unreliable_absorbance must not exceed masked_absorbance.",
+                remedy="Choose a smaller unreliable_absorbance.",
+            )
         if self.finest_grid_step_cm1 <= 0 or self.working_resolution_cm1 <= 0:
-            raise CoreError("params.grid", "Grid step and working resolution have to be above zero.",
-                            remedy="Enter positive numbers in cm-1.")
+            raise CoreError(
+                "params.grid",
+                "Grid step and working resolution have to be above zero.",
+                remedy="Enter positive numbers in cm-1.",
+            )
 
     def to_dict(self) -> dict[str, object]:
         """Plain JSON types, one key for each parameter."""
@@ -132,22 +148,35 @@ class MethodParams:
         known = {item.name: item for item in fields(cls)}
         unknown, missing = sorted(set(values) - set(known)), sorted(set(known) - set(values))
         if unknown or missing:
-            named = "; ".join(part for part in (f"unknown: {', '.join(unknown)}" if unknown else "",
-                                                f"missing: {', '.join(missing)}" if missing else "") if part)
-            raise CoreError("params.keys", f"The parameter list does not fit this version ({named}).",
-                            remedy="Start from the parameters of the present version.")
+            named = "; ".join(
+                part
+                for part in (
+                    f"unknown: {', '.join(unknown)}" if unknown else "",
+                    f"missing: {', '.join(missing)}" if missing else "",
+                )
+                if part
+            )
+            raise CoreError(
+                "params.keys",
+                f"The parameter list does not fit this version ({named}).",
+                remedy="Start from the parameters of the present version.",
+            )
         given: dict[str, object] = {}
         for name, item in known.items():
             value = values[name]
             default = item.default
             if isinstance(default, tuple):
                 if not isinstance(value, (list, tuple)) or len(value) != len(default):
-                    raise CoreError("params.kind", f"Parameter {name} has to be a list of {len(default)} numbers.",
-                                    remedy="Enter the numbers in order.")
+                    raise CoreError(
+                        "params.kind",
+                        f"Parameter {name} has to be a list of {len(default)} numbers.",
+                        remedy="Enter the numbers in order.",
+                    )
                 value = tuple(value)
             elif isinstance(default, int) and not (isinstance(value, int) and not isinstance(value, bool)):
-                raise CoreError("params.kind", f"Parameter {name} has to be a whole number.",
-                                remedy="Enter a whole number.")
+                raise CoreError(
+                    "params.kind", f"Parameter {name} has to be a whole number.", remedy="Enter a whole number."
+                )
             elif isinstance(default, float) and isinstance(value, int) and not isinstance(value, bool):
                 value = float(value)
             given[name] = value

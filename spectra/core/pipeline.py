@@ -1,4 +1,4 @@
-"""From one block to the whole result, in the order in which a chemist reads: measurement, bands, groups, identity, rest.
+"""From one block to the whole result, as a chemist reads: measurement, bands, groups, identity, rest.
 
 `analyse` is a pure function of its arguments: same bytes, parameters, table and references, same result. It touches no
 file, clock setting or database.
@@ -7,7 +7,6 @@ file, clock setting or database.
 from __future__ import annotations
 
 import hashlib
-import time
 from collections.abc import Callable, Sequence
 from dataclasses import replace
 
@@ -41,10 +40,19 @@ from spectra.core.version import CORE_VERSION, RESULT_SCHEMA
 Progress = Callable[[str, float], None]
 
 
-def analyse(block: SpectrumBlock, *, conditions: Conditions, params: MethodParams, table: GroupTable,
-            reference: ReferenceInput | None = None, watch: Sequence[WatchInput] = (), smiles: str | None = None,
-            expected_groups: tuple[str, ...] = (), forbidden_groups: tuple[str, ...] = (),
-            progress: Progress | None = None) -> AnalysisResult:
+def analyse(
+    block: SpectrumBlock,
+    *,
+    conditions: Conditions,
+    params: MethodParams,
+    table: GroupTable,
+    reference: ReferenceInput | None = None,
+    watch: Sequence[WatchInput] = (),
+    smiles: str | None = None,
+    expected_groups: tuple[str, ...] = (),
+    forbidden_groups: tuple[str, ...] = (),
+    progress: Progress | None = None,
+) -> AnalysisResult:
     """Read one spectrum against its declaration.
 
     expected_groups, forbidden_groups : identifiers of the group table that the material must or must not have, beside
@@ -52,18 +60,17 @@ def analyse(block: SpectrumBlock, *, conditions: Conditions, params: MethodParam
     Raises CoreError when the block, the structure or an identifier cannot be worked with; a reference or watch-list
     spectrum that cannot is named in its section instead.
     """
-    started = time.perf_counter()
-    timings: dict[str, float] = {}
 
     def stage(name: str, share: float) -> None:
-        timings[name] = time.perf_counter() - started
         if progress is not None:
             progress(name, share)
 
     known = {group.id for group in table.groups} | {wider.id for wider in table.classes}
     for name in (*expected_groups, *forbidden_groups):
         if name not in known:
-            raise CoreError("analysis.group", f"{name!r} is no group of the table.", remedy="Use an identifier of the table.")
+            raise CoreError(
+                "analysis.group", f"{name!r} is no group of the table.", remedy="Use an identifier of the table."
+            )
     declared_structure = _structure(smiles, table)
     stage("measurement", 0.1)
     prepared = prepare(block, conditions, params)
@@ -72,24 +79,54 @@ def analyse(block: SpectrumBlock, *, conditions: Conditions, params: MethodParam
     findings = [*prepared.findings, *_wet_matrix(bands, conditions)]
     stage("groups", 0.45)
     declared = _declared(declared_structure, expected_groups)
-    weighing = weigh_groups(prepared, bands, table, conditions, params, expected=declared, forbidden=forbidden_groups,
-                            tolerated=structures.tolerated_groups(declared) if declared else ())
+    weighing = weigh_groups(
+        prepared,
+        bands,
+        table,
+        conditions,
+        params,
+        expected=declared,
+        forbidden=forbidden_groups,
+        tolerated=structures.tolerated_groups(declared) if declared else (),
+    )
     findings += weighing.findings
     bands = tuple(replace(band, used_by=weighing.used_by.get(band, ())) for band in bands)
 
     stage("identity", 0.6)
     identity, impurities, curves, reference_findings = _against_reference(
-        prepared, conditions, reference, watch, params, lambda: stage("impurities", 0.75))
+        prepared, conditions, reference, watch, params, lambda: stage("impurities", 0.75)
+    )
     findings += reference_findings
     stage("result", 0.95)
     masks = _masks(prepared, identity is not None)
-    body = _body(block, conditions, params, table, prepared, bands, weighing, findings, identity, impurities,
-                 declared_structure, masks, reference, watch)
+    body = _body(
+        block,
+        conditions,
+        params,
+        table,
+        prepared,
+        bands,
+        weighing,
+        findings,
+        identity,
+        impurities,
+        declared_structure,
+        masks,
+        reference,
+        watch,
+    )
     digest = digest_of(body)
     stage("done", 1.0)
-    return AnalysisResult(body=body, digest=digest, curves={**_own_curves(prepared), **curves}, bands=bands,
-                          groups=weighing.claims, findings=tuple(findings), identity=identity, impurities=impurities,
-                          timings_s=timings)
+    return AnalysisResult(
+        body=body,
+        digest=digest,
+        curves={**_own_curves(prepared), **curves},
+        bands=bands,
+        groups=weighing.claims,
+        findings=tuple(findings),
+        identity=identity,
+        impurities=impurities,
+    )
 
 
 def digest_of(body: object) -> str:
@@ -121,15 +158,25 @@ def _wet_matrix(bands: tuple[Band, ...], conditions: Conditions) -> list[Finding
     bend = [b for b in bands if 1618 <= b.position_cm1 <= 1655 and b.fwhm_cm1 > 20]
     if not stretch or not bend:
         return []
-    return [Finding("measurement.wet_matrix", Severity.WARNING,
-                    f"A broad band at {stretch[0].position_cm1:.0f} cm-1 together with {bend[0].position_cm1:.0f} cm-1 is "
-                    "what a moist salt disc shows; O-H and N-H cannot be judged from it.",
-                    region_cm1=(3200.0, 3600.0), remedy="Dry the salt and the specimen, press again, or use a mull.")]
+    return [
+        Finding(
+            "measurement.wet_matrix",
+            Severity.WARNING,
+            f"A broad band at {stretch[0].position_cm1:.0f} cm-1 together with {bend[0].position_cm1:.0f} cm-1 is "
+            "what a moist salt disc shows; O-H and N-H cannot be judged from it.",
+            region_cm1=(3200.0, 3600.0),
+            remedy="Dry the salt and the specimen, press again, or use a mull.",
+        )
+    ]
 
 
 def _against_reference(
-    prepared: Prepared, conditions: Conditions, reference: ReferenceInput | None, watch: Sequence[WatchInput],
-    params: MethodParams, between: Callable[[], None],
+    prepared: Prepared,
+    conditions: Conditions,
+    reference: ReferenceInput | None,
+    watch: Sequence[WatchInput],
+    params: MethodParams,
+    between: Callable[[], None],
 ) -> tuple[Identity | None, Impurities | None, dict[str, np.ndarray], list[Finding]]:
     if reference is None:
         return None, None, {}, []
@@ -137,21 +184,35 @@ def _against_reference(
     try:
         other = prepare(reference.block, reference.conditions, params)
     except CoreError as error:
-        findings.append(Finding("identity.reference_unusable", Severity.SERIOUS,
-                                f"The reference {reference.name} cannot be used: {error}", remedy=error.problem.remedy))
+        findings.append(
+            Finding(
+                "identity.reference_unusable",
+                Severity.SERIOUS,
+                f"The reference {reference.name} cannot be used: {error}",
+                remedy=error.problem.remedy,
+            )
+        )
         return None, None, {}, findings
     compared, pair = identity_testing.compare(prepared, conditions, other, reference.conditions, reference.name, params)
     between()
     candidates = []
     for item in watch:
         try:
-            candidates.append(impurity_screening.Candidate(
-                item.name, prepare(item.block, item.conditions, params), item.conditions))
+            candidates.append(
+                impurity_screening.Candidate(item.name, prepare(item.block, item.conditions, params), item.conditions)
+            )
         except CoreError as error:
-            findings.append(Finding("impurities.component_unusable", Severity.WARNING,
-                                    f"The watch-list spectrum {item.name} cannot be used: {error}",
-                                    remedy=error.problem.remedy))
-    screened, laid = impurity_screening.screen(prepared, conditions, other, reference.conditions, tuple(candidates), params)
+            findings.append(
+                Finding(
+                    "impurities.component_unusable",
+                    Severity.WARNING,
+                    f"The watch-list spectrum {item.name} cannot be used: {error}",
+                    remedy=error.problem.remedy,
+                )
+            )
+    screened, laid = impurity_screening.screen(
+        prepared, conditions, other, reference.conditions, tuple(candidates), params
+    )
     curves: dict[str, np.ndarray] = {}
     if pair is not None:
         curves["reference"] = _onto(prepared.x_cm1, pair.x_cm1, pair.reference)
@@ -166,8 +227,12 @@ def _onto(grid: np.ndarray, x: np.ndarray, values: np.ndarray) -> np.ndarray:
 
 
 def _own_curves(prepared: Prepared) -> dict[str, np.ndarray]:
-    return {"x_cm1": prepared.x_cm1, "absorbance": prepared.absorbance, "baseline": prepared.baseline,
-            "corrected": prepared.corrected}
+    return {
+        "x_cm1": prepared.x_cm1,
+        "absorbance": prepared.absorbance,
+        "baseline": prepared.baseline,
+        "corrected": prepared.corrected,
+    }
 
 
 def _masks(prepared: Prepared, compared: bool) -> list[Mask]:
@@ -178,29 +243,55 @@ def _masks(prepared: Prepared, compared: bool) -> list[Mask]:
     return sorted(masks, key=lambda m: m.low_cm1)
 
 
-def _body(block: SpectrumBlock, conditions: Conditions, params: MethodParams, table: GroupTable, prepared: Prepared,
-          bands: tuple[Band, ...], weighing: GroupWeighing, findings: list[Finding], identity: Identity | None,
-          impurities: Impurities | None, declared: dict[str, object] | None, masks: list[Mask],
-          reference: ReferenceInput | None, watch: Sequence[WatchInput]) -> dict[str, object]:
+def _body(
+    block: SpectrumBlock,
+    conditions: Conditions,
+    params: MethodParams,
+    table: GroupTable,
+    prepared: Prepared,
+    bands: tuple[Band, ...],
+    weighing: GroupWeighing,
+    findings: list[Finding],
+    identity: Identity | None,
+    impurities: Impurities | None,
+    declared: dict[str, object] | None,
+    masks: list[Mask],
+    reference: ReferenceInput | None,
+    watch: Sequence[WatchInput],
+) -> dict[str, object]:
     body: dict[str, object] = {
         "schema": RESULT_SCHEMA,
         "findings": [_finding(item) for item in (*block.findings, *findings)],
-        "axis": {"first_cm1": float(block.x_cm1[0]), "last_cm1": float(block.x_cm1[-1]), "points": len(block.x_cm1),
-                 "spacing_cm1": block.spacing_cm1, "declared_unit": block.axis_unit_declared or None},
+        "axis": {
+            "first_cm1": float(block.x_cm1[0]),
+            "last_cm1": float(block.x_cm1[-1]),
+            "points": len(block.x_cm1),
+            "spacing_cm1": block.spacing_cm1,
+            "declared_unit": block.axis_unit_declared or None,
+        },
         "ordinate": {"declared": block.ordinate_declared or None, "used": block.ordinate_used.value},
-        "conditions": {"technique": conditions.technique, "phase": conditions.phase,
-                       "resolution_cm1": stated_resolution_cm1(block, conditions)},
+        "conditions": {
+            "technique": conditions.technique,
+            "phase": conditions.phase,
+            "resolution_cm1": stated_resolution_cm1(block, conditions),
+        },
         "preparation": [{"step": s.step, "parameters": s.parameters} for s in prepared.steps],
         "noise_absorbance": prepared.noise_absorbance if prepared.noise_absorbance > 0 else None,
         "bands": bands,
         "groups": weighing.claims,
-        "lanes": [{"group": lane.group, "label": lane.label, "verdict": lane.verdict, "windows": lane.windows}
-                  for lane in weighing.lanes],
+        "lanes": [
+            {"group": lane.group, "label": lane.label, "verdict": lane.verdict, "windows": lane.windows}
+            for lane in weighing.lanes
+        ],
         "masked": masks,
-        "versions": {"core": CORE_VERSION, "group_table": table.version, "group_table_digest": table.digest,
-                     "params_digest": digest_of(plain(params.to_dict())),
-                     "reference": (reference.label or reference.name) if reference else None,
-                     "watch": [item.label or item.name for item in watch]},
+        "versions": {
+            "core": CORE_VERSION,
+            "group_table": table.version,
+            "group_table_digest": table.digest,
+            "params_digest": digest_of(plain(params.to_dict())),
+            "reference": (reference.label or reference.name) if reference else None,
+            "watch": [item.label or item.name for item in watch],
+        },
     }
     if identity is not None:
         body["identity"] = identity
@@ -212,8 +303,14 @@ def _body(block: SpectrumBlock, conditions: Conditions, params: MethodParams, ta
 
 
 def _finding(item: Finding) -> dict[str, object]:
-    return {"code": item.code, "severity": item.severity, "message": item.message,
-            "region_cm1": item.region_cm1, "line": item.line, "remedy": item.remedy}
+    return {
+        "code": item.code,
+        "severity": item.severity,
+        "message": item.message,
+        "region_cm1": item.region_cm1,
+        "line": item.line,
+        "remedy": item.remedy,
+    }
 
 
 def _structure_section(declared: dict[str, object], weighing: GroupWeighing) -> dict[str, object]:
@@ -226,18 +323,29 @@ def _structure_section(declared: dict[str, object], weighing: GroupWeighing) -> 
         if claim.group in classes or claim.group in tolerated:
             continue
         if claim.group in expected and claim.verdict == "contradicted":
-            contradictions.append({"group": claim.group, "kind": "expected_but_contradicted",
-                                   "message": f"The structure has {claim.label}, and the spectrum speaks against it."})
+            contradictions.append(
+                {
+                    "group": claim.group,
+                    "kind": "expected_but_contradicted",
+                    "message": f"The structure has {claim.label}, and the spectrum speaks against it.",
+                }
+            )
         elif claim.group not in expected and claim.verdict == "supported":
             message = f"The spectrum shows {claim.label}, which the structure does not have."
             if claim.group == "water":
                 message += " Moisture or a hydrate would explain it."
             contradictions.append({"group": claim.group, "kind": "supported_but_not_expected", "message": message})
     return {
-        "formula": checked.formula, "smiles_canonical": checked.smiles_canonical,
-        "expected_groups": declared["groups"], "tolerated_groups": sorted(tolerated),
-        "contradictions": contradictions, "degrees_of_unsaturation": checked.degrees_of_unsaturation,
+        "formula": checked.formula,
+        "smiles_canonical": checked.smiles_canonical,
+        "expected_groups": declared["groups"],
+        "tolerated_groups": sorted(tolerated),
+        "contradictions": contradictions,
+        "degrees_of_unsaturation": checked.degrees_of_unsaturation,
         "notes": checked.notes,
-        "drawing": {"atoms": checked.atoms, "bonds": checked.bonds,
-                    "group_atoms": {g: atoms for g, atoms in declared["atoms"].items() if atoms}},  # type: ignore[union-attr]
+        "drawing": {
+            "atoms": checked.atoms,
+            "bonds": checked.bonds,
+            "group_atoms": {g: atoms for g, atoms in declared["atoms"].items() if atoms},
+        },  # type: ignore[union-attr]
     }

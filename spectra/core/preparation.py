@@ -6,6 +6,7 @@ Every step is recorded with its parameters, in order. The original is never chan
 from __future__ import annotations
 
 import math
+import warnings
 
 import numpy as np
 
@@ -43,8 +44,10 @@ def smoothing_gain(fwhm_cm1: float, independent_cm1: float) -> float:
     return min(1.0, math.sqrt(independent_cm1 / (2 * math.sqrt(math.pi) * sigma)))
 
 
-def savitzky_golay(values: np.ndarray, window: int, order: int, derivative: int = 0, spacing: float = 1.0) -> np.ndarray:
-    """Savitzky-Golay filter (1964, with the corrections of 1972): derivative in units of `spacing`, ends by their fit."""
+def savitzky_golay(
+    values: np.ndarray, window: int, order: int, derivative: int = 0, spacing: float = 1.0
+) -> np.ndarray:
+    """Savitzky-Golay filter (1964, with the corrections of 1972): derivative per `spacing`, ends by their fit."""
     from scipy.signal import savgol_filter
 
     return savgol_filter(values, window, order, deriv=derivative, delta=spacing, mode="interp")
@@ -82,7 +85,10 @@ def baseline_of(x_cm1: np.ndarray, absorbance: np.ndarray, params: MethodParams)
 
     step = float(x_cm1[1] - x_cm1[0])
     stiffness = (params.baseline_period_cm1 / (2 * math.pi * step)) ** 4
-    fitted, _ = arpls(absorbance, lam=stiffness, tol=params.baseline_tolerance, max_iter=params.baseline_iterations)
+    with warnings.catch_warnings():
+        # A flat trace lies on its baseline from the first round, which the library finds worth a warning.
+        warnings.simplefilter("ignore")
+        fitted, _ = arpls(absorbance, lam=stiffness, tol=params.baseline_tolerance, max_iter=params.baseline_iterations)
     return fitted
 
 
@@ -123,11 +129,22 @@ def prepare(block: SpectrumBlock, conditions: Conditions, params: MethodParams) 
     steps.append(Step("resolution", {"from_cm1": resolution_in, "to_cm1": resolution}))
     steps.append(Step("grid", {"first_cm1": float(grid[0]), "step_cm1": step, "points": len(grid)}))
 
-    usable, unreliable, masks, saturation = _saturation(even_x, even_a, even_valid, grid, on_grid, recorded.relative, params)
+    usable, unreliable, masks, saturation = _saturation(
+        even_x, even_a, even_valid, grid, on_grid, recorded.relative, params
+    )
     findings += saturation
     baseline = baseline_of(grid, on_grid, params)
-    steps.append(Step("baseline", {"method": "arPLS", "period_cm1": params.baseline_period_cm1,
-                                   "tolerance": params.baseline_tolerance, "iterations": params.baseline_iterations}))
+    steps.append(
+        Step(
+            "baseline",
+            {
+                "method": "arPLS",
+                "period_cm1": params.baseline_period_cm1,
+                "tolerance": params.baseline_tolerance,
+                "iterations": params.baseline_iterations,
+            },
+        )
+    )
     findings += measurement.baseline_findings(grid, baseline, params)
     smooth = gaussian_smooth(on_grid - baseline, step, resolution)
     steps.append(Step("smoothing", {"kind": "Gaussian", "fwhm_cm1": resolution}))
@@ -143,44 +160,73 @@ def prepare(block: SpectrumBlock, conditions: Conditions, params: MethodParams) 
     water = atmosphere.water_vapour(grid, on_grid, noise_grid, resolution)
     findings += measurement.atmosphere_findings(water, co2, conditions.phase, params)
     findings += measurement.fringe_findings(
-        measurement.fringes(grid, np.where(usable, on_grid, 0), noise_grid, params), params)
+        measurement.fringes(grid, np.where(usable, on_grid, 0), noise_grid, params), params
+    )
     readable = np.where(usable, smooth, 0.0)
     top = int(np.argmax(readable))
     findings += measurement.strength_findings(float(readable[top]), float(grid[top]), noise, recorded.relative, params)
     if noise > 0:
         loudest = sorted(windows, key=lambda w: -w[2])[:1]
-        findings.append(Finding(
-            "measurement.noise", Severity.INFO,
-            f"Noise is {noise:.2g} absorbance before any smoothing" + (
-                f"; the most restless window ({loudest[0][0]:.0f}-{loudest[0][1]:.0f} cm-1) reads {loudest[0][2]:.2g}."
-                if loudest else "."),
-            facts={"noise_absorbance": noise}))
+        findings.append(
+            Finding(
+                "measurement.noise",
+                Severity.INFO,
+                f"Noise is {noise:.2g} absorbance before any smoothing"
+                + (
+                    f"; the most restless window ({loudest[0][0]:.0f}-{loudest[0][1]:.0f} cm-1) "
+                    f"reads {loudest[0][2]:.2g}."
+                    if loudest
+                    else "."
+                ),
+                facts={"noise_absorbance": noise},
+            )
+        )
     else:
-        findings.append(Finding("measurement.noise_unknown", Severity.INFO,
-                                "No noise could be measured: too few points, or data that were computed or smoothed."))
+        findings.append(
+            Finding(
+                "measurement.noise_unknown",
+                Severity.INFO,
+                "No noise could be measured: too few points, or data that were computed or smoothed.",
+            )
+        )
     return Prepared(
-        x_cm1=frozen_array(grid), absorbance=frozen_array(np.where(usable, on_grid, np.nan)),
-        baseline=frozen_array(baseline), corrected=frozen_array(np.where(usable, corrected, np.nan)),
-        smooth=frozen_array(smooth), noise=frozen_array(local_noise), usable=_frozen_flags(usable),
-        unreliable=_frozen_flags(unreliable), masks=tuple(masks), steps=tuple(steps), findings=tuple(findings),
-        noise_absorbance=noise, resolution_cm1=resolution, relative=recorded.relative)
+        x_cm1=frozen_array(grid),
+        absorbance=frozen_array(np.where(usable, on_grid, np.nan)),
+        baseline=frozen_array(baseline),
+        corrected=frozen_array(np.where(usable, corrected, np.nan)),
+        smooth=frozen_array(smooth),
+        noise=frozen_array(local_noise),
+        usable=_frozen_flags(usable),
+        unreliable=_frozen_flags(unreliable),
+        masks=tuple(masks),
+        steps=tuple(steps),
+        findings=tuple(findings),
+        noise_absorbance=noise,
+        resolution_cm1=resolution,
+        relative=recorded.relative,
+    )
 
 
 def _judge_range(block: SpectrumBlock) -> None:
     x = block.x_cm1
     if len(x) < SMALLEST_POINTS:
-        raise CoreError("measurement.too_few_points",
-                        f"The block holds {len(x)} points; fewer than {SMALLEST_POINTS} are no spectrum to analyse.",
-                        remedy="Export the whole spectrum.")
+        raise CoreError(
+            "measurement.too_few_points",
+            f"The block holds {len(x)} points; fewer than {SMALLEST_POINTS} are no spectrum to analyse.",
+            remedy="Export the whole spectrum.",
+        )
     low, high = MID_INFRARED_CM1
     if x[0] > 4000 or x[-1] < 400 or min(x[-1], high) - max(x[0], low) < 200:
-        raise CoreError("measurement.not_mid_infrared",
-                        f"The axis runs from {x[0]:.0f} to {x[-1]:.0f} cm-1, outside the mid-infrared.",
-                        remedy="Upload a spectrum between 4000 and 400 cm-1, or correct the axis unit.")
+        raise CoreError(
+            "measurement.not_mid_infrared",
+            f"The axis runs from {x[0]:.0f} to {x[-1]:.0f} cm-1, outside the mid-infrared.",
+            remedy="Upload a spectrum between 4000 and 400 cm-1, or correct the axis unit.",
+        )
 
 
-def _on_even_points(x: np.ndarray, a: np.ndarray, valid: np.ndarray,
-                    spacing: float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+def _on_even_points(
+    x: np.ndarray, a: np.ndarray, valid: np.ndarray, spacing: float
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """The part inside the mid-infrared on evenly spaced points; filters below need them."""
     inside = (x >= MID_INFRARED_CM1[0]) & (x <= MID_INFRARED_CM1[1])
     x, a, valid = x[inside], a[inside], valid[inside]
@@ -192,8 +238,15 @@ def _on_even_points(x: np.ndarray, a: np.ndarray, valid: np.ndarray,
     return even, np.interp(even, x, a), np.interp(even, x, valid.astype(float)) > 0.99
 
 
-def _saturation(x: np.ndarray, a: np.ndarray, valid: np.ndarray, grid: np.ndarray, on_grid: np.ndarray, relative: bool,
-                params: MethodParams) -> tuple[np.ndarray, np.ndarray, list[Mask], list[Finding]]:
+def _saturation(
+    x: np.ndarray,
+    a: np.ndarray,
+    valid: np.ndarray,
+    grid: np.ndarray,
+    on_grid: np.ndarray,
+    relative: bool,
+    params: MethodParams,
+) -> tuple[np.ndarray, np.ndarray, list[Mask], list[Finding]]:
     """Which grid points total absorption spoils, as masks and findings. Recorded and smoothed values both count."""
     if relative:
         flags = np.interp(grid, x, valid.astype(float)) > 0.99
@@ -208,19 +261,29 @@ def _saturation(x: np.ndarray, a: np.ndarray, valid: np.ndarray, grid: np.ndarra
         masks.append(Mask(low, high, f"total absorption (absorbance above {params.masked_absorbance:g})"))
     if masks:
         widest = max(masks, key=lambda m: m.high_cm1 - m.low_cm1)
-        findings.append(Finding(
-            "measurement.saturated", Severity.SERIOUS,
-            f"{len(masks)} region(s) absorb so strongly (above {params.masked_absorbance:g}) that nothing can be read in "
-            f"them; the widest is {widest.low_cm1:.0f}-{widest.high_cm1:.0f} cm-1.",
-            region_cm1=(widest.low_cm1, widest.high_cm1 + step),
-            remedy="Measure a thinner or more dilute specimen."))
+        findings.append(
+            Finding(
+                "measurement.saturated",
+                Severity.SERIOUS,
+                f"{len(masks)} region(s) absorb so strongly (above {params.masked_absorbance:g}) that nothing can be "
+                f"read in them; the widest is {widest.low_cm1:.0f}-{widest.high_cm1:.0f} cm-1.",
+                region_cm1=(widest.low_cm1, widest.high_cm1 + step),
+                remedy="Measure a thinner or more dilute specimen.",
+            )
+        )
     doubtful = _runs(grid, unreliable & usable)
     if doubtful:
         strongest = max(doubtful, key=lambda r: r[1] - r[0])
-        findings.append(Finding(
-            "measurement.heights_unreliable", Severity.WARNING,
-            f"Absorbance exceeds {params.unreliable_absorbance:g} in {len(doubtful)} region(s); heights there are not "
-            "believed, positions less so.", region_cm1=strongest, remedy="Measure a thinner specimen."))
+        findings.append(
+            Finding(
+                "measurement.heights_unreliable",
+                Severity.WARNING,
+                f"Absorbance exceeds {params.unreliable_absorbance:g} in {len(doubtful)} region(s); heights there are "
+                "not believed, positions less so.",
+                region_cm1=strongest,
+                remedy="Measure a thinner specimen.",
+            )
+        )
     return usable, unreliable, masks, findings
 
 

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, fields, is_dataclass
+from dataclasses import dataclass, fields, is_dataclass
 from enum import Enum
 
 import numpy as np
@@ -17,7 +17,11 @@ from spectra.core.types import Conditions, Finding, SpectrumBlock
 
 GROUP_VERDICTS = ("supported", "contradicted", "undecided", "not_examined")
 IDENTITY_VERDICTS = (
-    "consistent", "consistent_with_differences", "not_consistent", "not_distinguishable", "cannot_be_compared",
+    "consistent",
+    "consistent_with_differences",
+    "not_consistent",
+    "not_distinguishable",
+    "cannot_be_compared",
 )
 IMPURITY_VERDICTS = ("found", "not_found_above_limit", "cannot_be_seen")
 
@@ -235,7 +239,6 @@ class AnalysisResult:
     findings: tuple[Finding, ...] = ()
     identity: Identity | None = None
     impurities: Impurities | None = None
-    timings_s: Mapping[str, float] = field(default_factory=dict)
 
     def to_json(self) -> dict[str, object]:
         """The result as JSON types: finite numbers, text, lists and dictionaries."""

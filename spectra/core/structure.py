@@ -84,9 +84,12 @@ def check_smiles(text: str) -> Structure:
     atoms = []
     for atom in drawn.GetAtoms():
         place = conformer.GetAtomPosition(atom.GetIdx())
-        atoms.append(Atom(atom.GetSymbol(), round(place.x, 4), round(place.y, 4), atom.GetFormalCharge(),
-                          atom.GetTotalNumHs()))
-    bonds = tuple(Bond(b.GetBeginAtomIdx(), b.GetEndAtomIdx(), float(b.GetBondTypeAsDouble())) for b in drawn.GetBonds())
+        atoms.append(
+            Atom(atom.GetSymbol(), round(place.x, 4), round(place.y, 4), atom.GetFormalCharge(), atom.GetTotalNumHs())
+        )
+    bonds = tuple(
+        Bond(b.GetBeginAtomIdx(), b.GetEndAtomIdx(), float(b.GetBondTypeAsDouble())) for b in drawn.GetBonds()
+    )
     components = len(Chem.GetMolFrags(molecule))
     repeat = any(atom.GetAtomicNum() == 0 for atom in molecule.GetAtoms())
     charged = any(atom.GetFormalCharge() for atom in molecule.GetAtoms())
@@ -164,8 +167,11 @@ def _patterns(group_id: str, smarts: tuple[str, ...]) -> tuple[object, ...]:
     for text in smarts:
         pattern = Chem.MolFromSmarts(text)
         if pattern is None:
-            raise CoreError("group_table.smarts", f"group {group_id}: the SMARTS {text!r} cannot be read.",
-                            remedy="Correct the pattern.")
+            raise CoreError(
+                "group_table.smarts",
+                f"group {group_id}: the SMARTS {text!r} cannot be read.",
+                remedy="Correct the pattern.",
+            )
         patterns.append(pattern)
     return tuple(patterns)
 
@@ -174,18 +180,28 @@ def _parse(text: str) -> object:
     if not isinstance(text, str) or not text:
         raise CoreError("structure.empty", "No structure was given.", remedy="Enter a SMILES, or leave the field out.")
     if len(text) > LARGEST_TEXT:
-        raise CoreError("structure.too_long", f"The SMILES holds {len(text)} characters; {LARGEST_TEXT} are allowed.",
-                        remedy="Enter the repeat unit or a smaller structure.")
+        raise CoreError(
+            "structure.too_long",
+            f"The SMILES holds {len(text)} characters; {LARGEST_TEXT} are allowed.",
+            remedy="Enter the repeat unit or a smaller structure.",
+        )
     if re.search(r"\s", text):
-        raise CoreError("structure.white_space", "The SMILES holds white space; a name behind it is not accepted.",
-                        remedy="Enter the SMILES alone.")
+        raise CoreError(
+            "structure.white_space",
+            "The SMILES holds white space; a name behind it is not accepted.",
+            remedy="Enter the SMILES alone.",
+        )
     if not re.fullmatch(r"[A-Za-z0-9@+\-\[\]()=#$:/\\.%*~]+", text):
-        raise CoreError("structure.characters", "The SMILES holds a character that no SMILES has.",
-                        remedy="Enter the SMILES alone.")
+        raise CoreError(
+            "structure.characters", "The SMILES holds a character that no SMILES has.", remedy="Enter the SMILES alone."
+        )
     rough_atoms = len(re.findall(r"\[[^\]]*\]|Cl|Br|[BCNOPSFIbcnops*]", text))
     if rough_atoms > LARGEST_ATOMS:
-        raise CoreError("structure.too_large", f"The structure has about {rough_atoms} atoms; {LARGEST_ATOMS} are allowed.",
-                        remedy="Enter the repeat unit or a smaller structure.")
+        raise CoreError(
+            "structure.too_large",
+            f"The structure has about {rough_atoms} atoms; {LARGEST_ATOMS} are allowed.",
+            remedy="Enter the repeat unit or a smaller structure.",
+        )
     from rdkit import Chem, RDLogger
 
     RDLogger.DisableLog("rdApp.*")
@@ -198,7 +214,10 @@ def _parse(text: str) -> object:
         raise CoreError("structure.syntax", "The SMILES cannot be read.", remedy="Check brackets, rings and symbols.")
     problems = Chem.DetectChemistryProblems(molecule)
     if problems:
-        raise CoreError("structure.impossible", f"The structure cannot exist: {problems[0].Message()}.",
-                        remedy="Check valences and charges.")
+        raise CoreError(
+            "structure.impossible",
+            f"The structure cannot exist: {problems[0].Message()}.",
+            remedy="Check valences and charges.",
+        )
     Chem.SanitizeMol(molecule)
     return molecule

@@ -13,12 +13,19 @@ from spectra.selectors import materials as all_materials
 
 from .fields import CHOOSE, CODE_HINT, Code, Day, Sectioned
 
+ATR_FIELDS = ("atr_crystal_index", "atr_angle_deg", "atr_reflections")
+
 
 class ReferenceForm(Sectioned):
     """A spectrum for the shelf. The last part answers what a file may leave open."""
 
     sections = (
         ("The spectrum", "", ("file", "technique", "phase", "instrument", "resolution_cm1")),
+        (
+            "The crystal, for attenuated total reflection",
+            "Leave empty for any other technique.",
+            ("atr_crystal_index", "atr_angle_deg", "atr_reflections"),
+        ),
         ("What it is of", "", ("code", "name", "material")),
         (
             "The standard that was measured",
@@ -47,6 +54,11 @@ class ReferenceForm(Sectioned):
         help_text="Where it was measured.",
     )
     resolution_cm1 = forms.FloatField(label="Resolution / cm⁻¹", min_value=0.05, max_value=64, required=False)
+    atr_crystal_index = forms.FloatField(
+        label="Refractive index of the crystal", min_value=1.01, max_value=6, required=False
+    )
+    atr_angle_deg = forms.FloatField(label="Angle of incidence / degrees", min_value=10, max_value=89, required=False)
+    atr_reflections = forms.IntegerField(label="Number of reflections", min_value=1, max_value=100, required=False)
     code = Code(label="Code", help_text=CODE_HINT)
     name = forms.CharField(label="Name of the standard", max_length=200)
     material = forms.ModelChoiceField(
@@ -114,6 +126,10 @@ class ReferenceForm(Sectioned):
             self.add_error("standard_received_on", "This day lies ahead.")
         if received and expires and expires <= received:
             self.add_error("standard_expires_on", "It must expire after it was received.")
+        if cleaned.get("technique") and cleaned["technique"] != TechniqueChoices.ATR:
+            for name in ATR_FIELDS:
+                if cleaned.get(name) is not None:
+                    self.add_error(name, "Leave it empty: the chosen technique has no crystal.")
         return cleaned
 
     def values(self) -> dict[str, object]:
@@ -122,6 +138,7 @@ class ReferenceForm(Sectioned):
             "technique",
             "phase",
             "resolution_cm1",
+            *ATR_FIELDS,
             "standard_lot",
             "certificate",
             "standard_received_on",

@@ -198,7 +198,7 @@ class WatchItem(models.Model):
 
 
 class Reference(Approvable):
-    """An approved spectrum of an authenticated standard: the standard's expiry and the spectrum's validity are two dates."""
+    """A spectrum of an authenticated standard: the standard's expiry and the spectrum's validity are two dates."""
 
     code = models.CharField(max_length=40, unique=True)
     material = models.ForeignKey(Material, on_delete=models.PROTECT, null=True, related_name="references")
@@ -212,6 +212,9 @@ class Reference(Approvable):
     phase = models.CharField(max_length=10, choices=PhaseChoices.choices)
     instrument = models.ForeignKey("spectra.Instrument", on_delete=models.PROTECT, null=True, blank=True)
     resolution_cm1 = models.FloatField(null=True, blank=True)
+    atr_crystal_index = models.FloatField(null=True, blank=True)
+    atr_angle_deg = models.FloatField(null=True, blank=True)
+    atr_reflections = models.PositiveIntegerField(null=True, blank=True)
     raw_file = models.ForeignKey("spectra.RawFile", on_delete=models.PROTECT)
     file_name = models.CharField(max_length=255)
     block_index = models.PositiveIntegerField(default=0)

@@ -42,6 +42,7 @@ class Upload(models.Model):
     problem_remedy = models.TextField(blank=True)
     question = models.CharField(max_length=20, blank=True)
     answers = models.JSONField(default=dict, blank=True)
+    facts = models.JSONField(default=dict, blank=True)  # what was stated beside a file that waits for an answer
     compared_with_original_by = models.ForeignKey(
         settings.AUTH_USER_MODEL, on_delete=models.PROTECT, null=True, blank=True, related_name="+"
     )

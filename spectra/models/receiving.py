@@ -75,7 +75,7 @@ class Sample(models.Model):
 
 
 class Examination(models.Model):
-    """One identity test by infrared on one or more samples of a delivery; the edition in force when it began governs."""
+    """One identity test by infrared on samples of a delivery; the edition in force when it began governs."""
 
     code = models.CharField(max_length=20, unique=True)
     delivery = models.ForeignKey(Delivery, on_delete=models.PROTECT, related_name="examinations")

@@ -50,7 +50,7 @@ PROCEDURE_FIELDS = (
 
 REFERENCE_FIELDS = (
     "standard_lot certificate standard_received_on standard_expires_on spectrum_valid_until technique phase"
-    " instrument_id resolution_cm1 block_index answers"
+    " instrument_id resolution_cm1 atr_crystal_index atr_angle_deg atr_reflections block_index answers"
 ).split()
 
 

@@ -7,7 +7,7 @@ outside the transaction, which is short.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import PurePosixPath, PureWindowsPath
 
 from django.utils import timezone
@@ -118,6 +118,7 @@ def bring_file(*, examination_id: int, by: User, file_name: str, data: bytes, fa
             raw_file=raw_file,
             file_name=name,
             state=UploadState.REFUSED,
+            facts=asdict(facts),
             uploaded_by=by,
             uploaded_at=timezone.now(),
         )
@@ -133,12 +134,17 @@ def bring_file(*, examination_id: int, by: User, file_name: str, data: bytes, fa
 
 
 def answer_upload(*, upload_id: int, by: User, answers: Mapping[str, object], facts: MeasurementFacts) -> Upload:
-    """Read the stored bytes again with a person's answer to what the file leaves open."""
+    """Read the stored bytes again with a person's answer to what the file leaves open.
+
+    What was stated when the file was brought still holds; `facts` adds to it or corrects it.
+    """
     permissions.require_analyst(by)
-    _judge_facts(facts)
     upload = Upload.objects.select_related("examination__procedure", "raw_file").filter(pk=upload_id).first()
     if upload is None:
         raise NotVisible("upload.unknown", "There is no such file.")
+    stated = {name: value for name, value in asdict(facts).items() if value not in ("", None)}
+    facts = MeasurementFacts(**upload.facts | stated)
+    _judge_facts(facts)
     technique = facts.technique or upload.examination.procedure.technique
     told = {**upload.answers, **{key: value for key, value in answers.items() if value}}
     result = formats.read(store.get(upload.raw_file.sha256), read_options(told, technique))
@@ -157,7 +163,7 @@ def answer_upload(*, upload_id: int, by: User, answers: Mapping[str, object], fa
             old={"answers": upload.answers},
             new={"answers": told},
         )
-        upload.answers = told
+        upload.answers, upload.facts = told, asdict(facts)
         contribute(examination=examination, user=by, kind=ContributionKind.UPLOADED)
         _take_in(upload=upload, result=result, by=by, facts=facts, technique=technique)
     return upload
@@ -328,7 +334,8 @@ def change_role(*, spectrum_id: int, by: User, role: str, reason: str) -> Spectr
         spectrum.role = role
         spectrum.save(update_fields=["role", "role_before_exclusion", "excluded_reason"])
         _record_role(spectrum, by, old, reason)
-        if role == SpectrumRole.DECISIVE:
+        # A decisive one is analysed anew with the versions in force today, and its claims are drafted from that.
+        if role == SpectrumRole.DECISIVE or (role in READ_ROLES and not spectrum.analyses.exists()):
             queue_analysis(spectrum=spectrum, by=by)
     return spectrum
 

@@ -8,14 +8,15 @@ from django import template
 from django.utils.html import format_html, format_html_join
 from django.utils.safestring import SafeString
 
-from spectra.core.structure import Atom, Bond, Structure
+from spectra.core.structure import Bond, Structure
 from spectra.core.types import Ordinate, SpectrumBlock
 
 register = template.Library()
 
 BOND_PX = 30.0
 UNITS_PER_BOND = 1.5
-MARGIN_PX = 26.0
+MARGIN_PX = 34.0
+PARTS_GAP_PX = 64.0
 LINE_GAP_PX = 4.2
 LETTER_PX = 9.5  # half a capital letter with its surrounding room: bonds stop there
 
@@ -38,7 +39,7 @@ def structure_drawing(structure: Structure | None, name: str = "") -> SafeString
     """The skeleton of a structure: a carbon at each corner, other atoms by symbol, open ends of a unit barred."""
     if structure is None:
         return ""
-    places = _places(structure.atoms)
+    places = _places(structure)
     labels = [_label(structure, index) for index in range(len(structure.atoms))]
     lines: list[tuple[Point, Point, str]] = []
     for bond in structure.bonds:
@@ -78,10 +79,35 @@ def _px(value: float) -> str:
     return f"{value:.1f}"
 
 
-def _places(atoms: tuple[Atom, ...]) -> list[Point]:
+def _places(structure: Structure) -> list[Point]:
+    """Where each atom stands, in pixels; the parts of a salt or mixture stand side by side."""
     scale = BOND_PX / UNITS_PER_BOND
-    left, top = min(atom.x for atom in atoms), max(atom.y for atom in atoms)
-    return [(MARGIN_PX + (atom.x - left) * scale, MARGIN_PX + (top - atom.y) * scale) for atom in atoms]
+    places = [(0.0, 0.0)] * len(structure.atoms)
+    left = MARGIN_PX
+    parts = _parts(structure)
+    tallest = max(_height(structure, part) for part in parts)
+    for part in parts:
+        atoms = [structure.atoms[index] for index in part]
+        first, top = min(atom.x for atom in atoms), max(atom.y for atom in atoms)
+        down = MARGIN_PX + (tallest - _height(structure, part)) * scale / 2
+        for index, atom in zip(part, atoms, strict=True):
+            places[index] = (left + (atom.x - first) * scale, down + (top - atom.y) * scale)
+        left = max(places[index][0] for index in part) + PARTS_GAP_PX
+    return places
+
+
+def _height(structure: Structure, part: list[int]) -> float:
+    heights = [structure.atoms[index].y for index in part]
+    return max(heights) - min(heights)
+
+
+def _parts(structure: Structure) -> list[list[int]]:
+    """The atoms of each separate part, in the order of their first atoms."""
+    part_of = list(range(len(structure.atoms)))
+    for bond in structure.bonds:
+        old, new = sorted((part_of[bond.start], part_of[bond.end]), reverse=True)
+        part_of = [new if part == old else part for part in part_of]
+    return [[i for i, part in enumerate(part_of) if part == first] for first in sorted(set(part_of))]
 
 
 def _neighbours(structure: Structure, index: int) -> list[int]:

@@ -19,18 +19,19 @@ from .common import attempt, bound, checkers_only, form_page, owners_only, reade
 @require_GET
 @readers_only
 def instruments(request: HttpRequest) -> HttpResponse:
-    context = {"rows": selectors_master.instruments(), "may_draft": permissions.may_own_methods(request.user)}
+    context = {"states": selectors_master.instruments(), "may_draft": permissions.may_own_methods(request.user)}
     return render(request, "spectra/instruments.html", context)
 
 
 @require_GET
 @readers_only
 def instrument(request: HttpRequest, pk: int) -> HttpResponse:
-    row = selectors_master.instrument(pk)
+    state = selectors_master.instrument(pk)
     user = request.user
     context = {
-        "row": row,
-        "checks": selectors_master.checks_of(row),
+        "state": state,
+        "row": state.instrument,
+        "checks": selectors_master.checks_of(state.instrument),
         "may_draft": permissions.may_own_methods(user),
         "may_check": permissions.may_analyse(user) or permissions.may_own_methods(user),
     }
@@ -65,7 +66,7 @@ def new_instrument(request: HttpRequest) -> HttpResponse:
 @require_http_methods(["GET", "POST"])
 @owners_only
 def new_qualification(request: HttpRequest, pk: int) -> HttpResponse:
-    row = selectors_master.instrument(pk)
+    row = selectors_master.instrument(pk).instrument
     form = bound(request, QualificationForm)
     made, status = attempt(
         form, lambda: services.record_qualification(by=request.user, instrument_id=pk, **form.cleaned_data)

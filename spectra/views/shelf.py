@@ -15,12 +15,18 @@ from spectra.services import master
 
 from .common import attempt, bound, form_page, owners_only, readers_only
 
+LONGEST_SEARCH = 100
+
 
 @require_GET
 @readers_only
 def shelf(request: HttpRequest) -> HttpResponse:
-    rows = list(selectors.references())
-    context = {"references": rows, "may_draft": permissions.may_own_methods(request.user)}
+    text = request.GET.get("text", "").strip()[:LONGEST_SEARCH]
+    context = {
+        "references": selectors_master.find_references(text),
+        "text": text,
+        "may_draft": permissions.may_own_methods(request.user),
+    }
     return render(request, "spectra/shelf.html", context)
 
 
@@ -65,7 +71,6 @@ def new_reference(request: HttpRequest) -> HttpResponse:
         title="Register a reference",
         submit="Register as a draft",
         crumbs=[("Shelf", reverse("spectra:shelf"))],
-        choose_file_again=form.is_bound,
         template="spectra/reference_form.html",
     )
 

@@ -20,20 +20,30 @@ from django.test import Client
 from django.urls import URLPattern, URLResolver, get_resolver, reverse
 
 from labsite import policy
-from tests.cast import PASSWORD, make_cast, signed_in
+from labsite.accounts.models import Role, User
+from labsite.accounts.services import deactivate
+from reviews.models import InterpretationVersion
+from reviews.services import reviewing
+from spectra import computing
+from spectra.core.errors import CoreError
+from spectra.services import analyses, approvals, master
+from tests import builders
+from tests.builders import Laboratory
+from tests.cast import PASSWORD, Cast, make_cast, make_person, sign_in
 
 PEOPLE = ("visitor", "outsider", "analyst", "reviewer", "qa_manager", "method_owner", "administrator")
+INSIDERS = ("manifold", "administrator")  # between them they may do everything
 METHODS = ("GET", "POST", "PUT", "PATCH", "DELETE")
-NOBODY = "302 404 404 404 404 404 404"
-Kwargs = dict[str, Callable[["World"], object]]
+pytestmark = pytest.mark.django_db  # the databases are made; the laboratory below lives longer than one test
 
 
 @dataclass(frozen=True)
 class World:
     """One laboratory with one record in every state that an address can meet."""
 
-    cast: object
-    lab: object
+    cast: Cast
+    lab: Laboratory
+    manifold: User  # analyst, reviewer, QA manager and method owner at once
     id: SimpleNamespace  # primary keys and hashes by name
 
 
@@ -158,14 +168,14 @@ LINES: tuple[Line, ...] = (
     post("spectra:new_method", "302 404 403 403 403 422 403", "nothing typed"),
     get("spectra:new_method_version", "302 404 403 403 403 200 403", pk="method"),
     post("spectra:new_method_version", "302 404 403 403 403 422 403", "nothing typed", pk="method"),
-    post("spectra:load_method", "302 404 403 403 403 409 403", "loaded already"),
+    post("spectra:load_method", "302 404 403 403 403 302 403"),
     get("spectra:group_tables", "302 404 200 200 200 200 403"),
     get("spectra:group_table", "302 404 200 200 200 200 403", pk="group_table"),
     get("spectra:new_group_table", "302 404 403 403 403 200 403"),
     post("spectra:new_group_table", "302 404 403 403 403 422 403", "nothing typed"),
     get("spectra:new_group_table_version", "302 404 403 403 403 200 403", pk="group_table"),
     post("spectra:new_group_table_version", "302 404 403 403 403 422 403", "nothing typed", pk="group_table"),
-    post("spectra:load_group_table", "302 404 403 403 403 409 403", "loaded already"),
+    post("spectra:load_group_table", "302 404 403 403 403 302 403"),
     get("spectra:instruments", "302 404 200 200 200 200 403"),
     get("spectra:instrument", "302 404 200 200 200 200 403", pk="instrument"),
     get("spectra:new_instrument", "302 404 403 403 403 200 403"),
@@ -208,7 +218,7 @@ LINES: tuple[Line, ...] = (
     get("reviews:version", "302 404 302 302 302 302 403", pk="draft"),
     post(
         "reviews:add_claim", "302 404 302 403 403 403 403", "",
-        lambda world: {"kind": "other", "verdict": world.id.other_verdict, "title": "A smell", "reason": "noticed"},
+        lambda world: {"kind": "quality", "verdict": "quality:usable", "title": "Thin film", "reason": "as asked"},
         pk="draft",
     ),
     post("reviews:add_claim", "302 404 422 403 403 403 403", "nothing typed", pk="draft"),
@@ -262,3 +272,299 @@ LINES: tuple[Line, ...] = (
     ),
     post("reviews:revise", "302 404 302 403 403 403 403", "rejected", pk="rejected"),
 )
+
+
+# The laboratory in which everything is asked
+
+
+@contextmanager
+def rolled_back() -> Iterator[None]:
+    """A transaction that leaves nothing behind; services may open their durable one inside it, as in any test."""
+    block = transaction.atomic()
+    block._from_testcase = True
+    with block:
+        yield
+        transaction.set_rollback(True)
+
+
+@pytest.fixture(scope="module")
+def world(django_db_setup, django_db_blocker) -> Iterator[World]:
+    with django_db_blocker.unblock(), rolled_back():
+        yield build_world()
+
+
+def build_world() -> World:
+    cast = make_cast()
+    manifold = make_person(
+        "manifold", "Manifold", (Role.ANALYST, Role.REVIEWER, Role.QA_MANAGER, Role.METHOD_OWNER)
+    )
+    former = make_person("former", "Former analyst", (Role.ANALYST,))
+    deactivate(by=cast.administrator, user_id=former.pk, reason="left")
+    lab = builders.laboratory(cast)
+    watched = builders.register_reference(cast, None, code="R-2", seed=91)
+    builders.approved("reference", watched, cast)
+    watch_list = master.draft_watch_list(
+        by=cast.method_owner, code="W-1", title="Likely contaminants", items=[("Other ester", watched.pk)]
+    )
+    draft_material = builders.draft_material(cast, code="BAC", name="Butyl acetate", smiles="CCCCOC(C)=O")
+
+    waiting = builders.waiting_analysis(cast, lab)
+    asking = builders.upload(
+        builders.examination(cast, lab, lot="L-2"), cast.analyst, data=builders.table_file(), file_name="table.txt"
+    )
+    failed = builders.waiting_analysis(cast, lab)
+    draft = builders.drafted_version(cast, lab, lot="L-3")  # one real computation, for the plot
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(computing, "compute", lambda analysis, *, progress: refuse())
+        analyses.execute(analysis_id=failed.pk)
+        patch.setattr(computing, "compute", lambda analysis, *, progress: builders.fake_outcome())
+        ready = builders.drafted_version(cast, lab, lot="L-4")
+        builders.confirm_all(ready, cast.analyst)
+        builders.conclude(ready, cast.analyst)
+        submitted = builders.submitted_version(cast, lab, lot="L-5")
+        taken = builders.taken_version(cast, lab, lot="L-6")
+        seen = builders.taken_version(cast, lab, lot="L-7")
+        builders.see_everything(seen, cast.reviewer)
+        disputed = dispute(builders.taken_version(cast, lab, lot="L-8"), cast)
+        answered = dispute(builders.taken_version(cast, lab, lot="L-9"), cast, answer="The film was thin.")
+        approved = builders.approved_version(cast, lab, lot="L-10")
+        rejected = builders.rejected_version(cast, lab, lot="L-11")
+    open_first(taken, cast)
+
+    draft_claim = draft.claims.filter(kind="group", status="proposed").first()
+    examination = draft.interpretation.examination
+    points = list(taken.points.order_by("pk"))
+    return World(
+        cast,
+        lab,
+        manifold,
+        SimpleNamespace(
+            second_analyst=cast.second_analyst.pk,
+            former=former.pk,
+            entry=1,
+            delivery_kind="delivery",
+            delivery=examination.delivery_id,
+            sample=examination.samples.get().pk,
+            examination=waiting.spectrum.examination_id,
+            asking_upload=asking.pk,
+            reference=lab.reference.pk,
+            raw=draft.analysis.spectrum.upload.raw_file.sha256,
+            material=lab.material.pk,
+            material_kind="material",
+            draft_material=draft_material.pk,
+            draft_material_hash=approvals.content_hash_of(type(draft_material).objects.get(pk=draft_material.pk)),
+            watch_list=watch_list.pk,
+            procedure=lab.procedure.pk,
+            method=lab.method.pk,
+            group_table=lab.table.pk,
+            instrument=lab.instrument.pk,
+            accessory=lab.instrument.accessories.get().pk,
+            waiting_analysis=waiting.pk,
+            waiting_spectrum=waiting.spectrum_id,
+            failed_analysis=failed.pk,
+            draft=draft.pk,
+            draft_analysis=draft.analysis_id,
+            draft_spectrum=draft.analysis.spectrum_id,
+            draft_claim=draft_claim.pk,
+            changed_verdict="undecided" if draft_claim.verdict != "undecided" else "supported",
+            ready=ready.pk,
+            ready_hash=builders.hash_to_sign(ready),
+            submitted=submitted.pk,
+            submitted_claim=submitted.claims.first().pk,
+            taken=taken.pk,
+            taken_hash=taken.content_hash,
+            opened_point=points[0].pk,
+            taken_point=points[-1].pk,
+            seen=seen.pk,
+            seen_hash=seen.content_hash,
+            disputed=disputed.pk,
+            disputed_point=disputed.points.order_by("pk").first().pk,
+            answered=answered.pk,
+            answered_point=answered.points.order_by("pk").first().pk,
+            approved=approved.pk,
+            approved_hash=approved.content_hash,
+            approved_spectrum=approved.analysis.spectrum_id,
+            rejected=rejected.pk,
+        ),
+    )
+
+
+def refuse() -> None:
+    raise CoreError("spectrum.empty", "There is nothing to analyse.")
+
+
+def open_first(version, cast):
+    point = version.points.order_by("pk").first()
+    reviewing.open_point(version_id=version.pk, point_id=point.pk, by=cast.reviewer)
+    return point
+
+
+def dispute(version, cast, *, answer: str = ""):
+    """The reviewer disagrees about the first point, and the analyst answers where `answer` is given."""
+    here = {"version_id": version.pk, "point_id": open_first(version, cast).pk}
+    reviewing.judge_point(**here, by=cast.reviewer, judgement="disagree", comment="I see it otherwise.")
+    if answer:
+        reviewing.answer_disagreement(**here, by=cast.analyst, answer=answer)
+    return version
+
+
+def client_of(world: World, person: str, **options: object) -> Client:
+    client = Client(raise_request_exception=False, **options)
+    if person != "visitor":
+        sign_in(client, world.manifold if person == "manifold" else world.cast[person])
+    return client
+
+
+def address(world: World, line: Line) -> str:
+    return reverse(line.name, kwargs={name: getattr(world.id, key) for name, key in line.kwargs.items()})
+
+
+# What each answer must keep
+
+
+class Inline(HTMLParser):
+    """Finds what the content security policy would refuse, and whatever would be fetched from outside."""
+
+    FETCHING = {"src", "href", "action", "formaction", "poster", "data", "hx-get", "hx-post"}
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.wrong: list[str] = []
+
+    def handle_starttag(self, tag: str, attributes: list[tuple[str, str | None]]) -> None:
+        given = dict(attributes)
+        if tag == "style" or (tag == "script" and not given.get("src")):
+            self.wrong.append(f"inline <{tag}>")
+        for name, value in attributes:
+            if name == "style" or name.startswith(("on", "hx-on")):
+                self.wrong.append(f"{name} on <{tag}>")
+            if name in self.FETCHING and re.match(r"\s*(?:[a-z]+:|//)", value or "", re.IGNORECASE):
+                self.wrong.append(f"{name}={value!r} on <{tag}>")
+
+
+def wrong_with(response: HttpResponse) -> list[str]:
+    """What is against the rules that hold for every answer."""
+    wrong = []
+    if response.status_code >= 500:
+        wrong.append(f"status {response.status_code}")
+    given = response.headers.get("Content-Security-Policy", "none")
+    allowed = (policy.PLAIN, policy.WITH_PLOT) if getattr(response, "holds_plot", False) else (policy.PLAIN,)
+    if given not in allowed:
+        wrong.append(f"policy {given}")
+    if response.headers.get("Content-Type", "").startswith("text/html"):
+        page = Inline()
+        page.feed(response.content.decode("utf-8"))
+        wrong += page.wrong
+    return wrong
+
+
+# The tests
+
+
+def all_names() -> list[str]:
+    def walk(patterns: list, spaces: tuple[str, ...]) -> Iterator[str]:
+        for pattern in patterns:
+            if isinstance(pattern, URLResolver):
+                yield from walk(pattern.url_patterns, spaces + ((pattern.namespace,) if pattern.namespace else ()))
+            elif isinstance(pattern, URLPattern):
+                assert pattern.name, f"{pattern.pattern} has no name"
+                yield ":".join((*spaces, pattern.name))
+
+    return list(walk(get_resolver().url_patterns, ()))
+
+
+def test_every_address_stands_in_the_table_and_every_line_has_an_address():
+    there, listed = set(all_names()), {line.name for line in LINES}
+    assert not there - listed, f"addresses without a line: {sorted(there - listed)}"
+    assert not listed - there, f"lines without an address: {sorted(listed - there)}"
+    assert len({line.test_id for line in LINES}) == len(LINES)
+
+
+def test_no_name_is_given_to_two_addresses():
+    names = all_names()
+    assert len(names) == len(set(names))
+
+
+@pytest.mark.parametrize("line", LINES, ids=lambda line: line.test_id)
+def test_each_role_gets_the_answer_that_the_table_says(world, line):
+    expected = dict(zip(PEOPLE, map(int, line.statuses.split()), strict=True))
+    found, wrong = {}, []
+    for person in PEOPLE:
+        with rolled_back():
+            client = client_of(world, person)
+            response = client.generic if line.method not in ("GET", "POST") else getattr(client, line.method.lower())
+            response = response(address(world, line), line.data(world) if line.method == "POST" else {})
+            found[person] = response.status_code
+            wrong += [f"{person}: {what}" for what in wrong_with(response)]
+            if response.streaming:
+                assert b"".join(response.streaming_content)
+    assert found == expected
+    assert not wrong
+
+
+@pytest.mark.parametrize("name", sorted({line.name for line in LINES}))
+def test_other_methods_are_refused_and_break_nothing(world, name):
+    lines = [line for line in LINES if line.name == name]
+    taken = {line.method for line in lines}
+    for person in INSIDERS:
+        for method in METHODS:
+            if method in taken:
+                continue
+            with rolled_back():
+                response = client_of(world, person).generic(method, address(world, lines[0]))
+                assert response.status_code in (403, 405), f"{method} by {person}: {response.status_code}"
+                assert not wrong_with(response)
+
+
+@pytest.mark.parametrize("line", [line for line in LINES if line.method == "POST"], ids=lambda line: line.test_id)
+def test_a_post_from_another_site_is_refused(world, line):
+    """Without the token of the form nothing is done, whoever is signed in."""
+    for person in INSIDERS:
+        with rolled_back():
+            response = client_of(world, person, enforce_csrf_checks=True).post(address(world, line), line.data(world))
+            assert response.status_code == 403, person
+            assert not wrong_with(response)
+
+
+@pytest.mark.parametrize(
+    "line", {line.name: line for line in LINES if line.kwargs}.values(), ids=lambda line: line.test_id
+)
+def test_a_record_that_is_not_there_is_not_found(world, line):
+    """Nowhere an error of ours, and no hint at what exists."""
+    unknown = {"sha256": "0" * 64, "kind": "nothing", "subject_id": "nothing"}
+    for number in (999_999_999, 2**63, 10**25):
+        url = reverse(line.name, kwargs={name: unknown.get(name, number) for name in line.kwargs})
+        for person in INSIDERS:
+            with rolled_back():
+                client = client_of(world, person)
+                response = client.get(url) if line.method == "GET" else client.post(url, line.data(world))
+                assert response.status_code in (403, 404, 422), f"{number} by {person}: {response.status_code}"
+                assert not wrong_with(response)
+
+
+def test_an_address_that_does_not_exist_is_a_page_of_ours(world):
+    for person in PEOPLE:
+        with rolled_back():
+            response = client_of(world, person).get("/no/such/page/")
+            assert response.status_code == 404
+            assert not wrong_with(response)
+            assert b"There is no such page." in response.content
+
+
+@pytest.mark.parametrize(
+    "name", ["reviews:sample", "reviews:bench", "reviews:review", "trail:entry", "accounts:person", "spectra:material"]
+)
+def test_a_program_that_asks_for_json_gets_refusals_in_one_shape(world, name):
+    line = next(line for line in LINES if line.name == name)
+    with rolled_back():
+        client = client_of(world, "outsider")
+        answer = client.get(address(world, line), headers={"accept": "application/json"})
+    assert answer.status_code == 404
+    assert set(answer.json()["error"]) == {"code", "message", "remedy", "params", "request"}
+
+
+def test_the_database_was_left_as_it_was(world):
+    """The questions above were asked of one laboratory: this is what lets them not disturb one another."""
+    assert connection.in_atomic_block
+    assert InterpretationVersion.objects.get(pk=world.id.submitted).state == "submitted"
+    assert InterpretationVersion.objects.get(pk=world.id.taken).state == "in_review"

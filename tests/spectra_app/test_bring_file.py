@@ -100,6 +100,33 @@ def test_a_file_that_leaves_something_open_waits_and_is_read_once_answered(cast,
         uploads.answer_upload(upload_id=upload.pk, by=cast.analyst, answers={}, facts=MeasurementFacts())
 
 
+def test_what_was_stated_beside_a_file_still_holds_once_it_is_answered(cast, row):
+    upload = builders.upload(
+        row,
+        cast.analyst,
+        data=builders.table_file(),
+        role="background",
+        prepared_by_id=cast.reviewer.pk,
+        resolution_cm1=8.0,
+    )
+    while upload.state == "needs_answer":
+        answers = {"x_unit": "cm-1", "ordinate": "absorbance", "columns": "2"}
+        upload = uploads.answer_upload(
+            upload_id=upload.pk,
+            by=cast.second_analyst,
+            answers={upload.question: answers[upload.question]},
+            facts=MeasurementFacts(scans=32),
+        )
+    spectrum = upload.spectra.get()
+    assert (spectrum.role, spectrum.prepared_by, spectrum.measured_by) == (
+        "background",
+        cast.reviewer,
+        cast.second_analyst,
+    )
+    assert (spectrum.resolution_cm1, spectrum.scans) == (8.0, 32)
+    assert Contribution.objects.filter(user=cast.reviewer, kind="prepared").exists()
+
+
 def test_an_answer_that_is_no_choice_is_refused(cast, row):
     upload = builders.upload(row, cast.analyst, data=builders.table_file())
     for answers in ({"ordinate": "loudness"}, {"x_unit": "furlong"}, {"columns": "two"}):
@@ -165,10 +192,10 @@ def test_nul_bytes_and_odd_letters_in_headers_are_stored_on_every_database(cast,
     assert "\x00" not in repr(kept)
 
 
-def test_a_second_file_is_a_replicate_and_is_not_analysed(cast, row):
+def test_a_second_file_is_a_replicate_and_is_analysed_beside_the_first(cast, row):
     builders.upload(row, cast.analyst)
     second = builders.upload(row, cast.analyst, data=builders.jcamp_file(seed=2)).spectra.get()
-    assert second.role == "replicate" and not second.analyses.exists()
+    assert second.role == "replicate" and second.analyses.get().state == "queued"
 
 
 def test_a_background_does_not_decide(cast, row):
@@ -191,7 +218,7 @@ def test_a_file_of_several_blocks_gives_one_decisive_spectrum(cast, row):
     upload = builders.upload(row, cast.analyst, data=link.encode(), role="decisive")
     assert upload.state == "read", upload.problem_text
     assert [s.role for s in upload.spectra.order_by("block_index")] == ["decisive", "replicate", "replicate"]
-    assert Analysis.objects.count() == 1
+    assert Analysis.objects.count() == 3
 
 
 @pytest.mark.parametrize(

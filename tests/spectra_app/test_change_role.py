@@ -46,7 +46,7 @@ def test_a_spectrum_taken_in_again_loses_the_reason_and_keeps_the_history(cast, 
 def test_another_spectrum_made_decisive_replaces_the_first_and_is_analysed(cast, pair):
     change(cast, pair[1], "decisive", by=cast.second_analyst)
     assert [Spectrum.objects.get(pk=s.pk).role for s in pair] == ["replicate", "decisive"]
-    assert pair[1].analyses.get().state == "queued"
+    assert [row.state for row in pair[1].analyses.all()] == ["queued", "queued"]  # as a replicate, and as decisive
     assert TrailEntry.objects.filter(event="spectrum.role_changed").count() == 2
     assert Contribution.objects.filter(user=cast.second_analyst, kind="changed_role").exists()
 
@@ -88,3 +88,13 @@ def test_evidence_stays_while_a_reviewer_has_it_and_after_the_decision(cast, lab
     with pytest.raises(NotPossible) as refused:
         change(cast, rejected.interpretation.examination.spectra.get(), "excluded")
     assert refused.value.code == "examination.decided"
+
+
+def test_a_background_that_was_a_replicate_after_all_is_analysed(cast, lab):
+    row = builders.examination(cast, lab)
+    spectrum = builders.upload(row, cast.analyst, role="background").spectra.get()
+    change(cast, spectrum, "replicate", "it was the sample")
+    assert spectrum.analyses.count() == 1
+    change(cast, spectrum, "excluded")
+    change(cast, spectrum, "replicate", "no bubble after all")
+    assert spectrum.analyses.count() == 1

@@ -44,6 +44,12 @@ def test_heteroatoms_carry_their_hydrogens_and_charges():
     assert "H2N" in words or "NH2" in words
 
 
+def test_the_parts_of_a_salt_stand_apart():
+    root = ElementTree.fromstring(structure_drawing(structure.check_smiles("[NH4+].[Cl-]")))
+    left, right = sorted(float(text.get("x")) for text in root.iter("text"))
+    assert right - left > 50
+
+
 def test_a_double_bond_has_two_strokes_and_a_triple_bond_three():
     def strokes(smiles):
         return structure_drawing(structure.check_smiles(smiles)).count("<line")

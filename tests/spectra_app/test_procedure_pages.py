@@ -182,3 +182,17 @@ def test_the_commands_load_drafts_in_the_name_of_a_method_owner(cast, capsys):
     for by in ("analyst", "nobody"):
         with pytest.raises(CommandError):
             call_command("load_method", by=by)
+
+
+def test_an_approved_table_that_a_later_program_cannot_read_still_opens(cast, lab, as_person, monkeypatch):
+    from spectra.core.errors import CoreError
+
+    def refuse(digest, text):
+        raise CoreError("group_table.key", "The table has an unknown key.")
+
+    monkeypatch.setattr(selectors_master.computing, "parsed_table", refuse)
+    client = as_person(cast.method_owner)
+    page = client.get(reverse("spectra:group_table", args=[lab.table.pk])).content.decode()
+    assert "cannot read this older text" in page
+    assert client.get(reverse("spectra:material", args=[lab.material.pk])).status_code == 200
+    assert client.get(reverse("spectra:new_material")).status_code == 200

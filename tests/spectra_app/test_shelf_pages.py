@@ -156,3 +156,14 @@ def test_the_raw_file_comes_back_byte_by_byte_as_an_attachment(cast, lab, as_per
 
 def test_a_file_that_is_not_in_the_store_is_not_found(cast, as_person):
     assert as_person(cast.analyst).get(reverse("spectra:raw_file", args=["0" * 64])).status_code == 404
+
+
+def test_the_shelf_is_searched_by_words(cast, lab, as_person):
+    register_reference(cast, None, code="ZZ-9", seed=4)
+    client = as_person(cast.analyst)
+    page = client.get(reverse("spectra:shelf"), {"text": "zz standard"}).content.decode()
+    assert "ZZ-9" in page
+    assert ">R-1<" not in page
+    nothing = client.get(reverse("spectra:shelf"), {"text": "<i>nothing"}).content.decode()
+    assert "No reference fits this search." in nothing
+    assert "<i>nothing" not in nothing

@@ -86,8 +86,12 @@ def phases_of(conditions: Conditions) -> tuple[bool, ...]:
     """Which windows apply; both when neither phase nor technique tells."""
     if conditions.phase is Phase.GAS or conditions.technique is Technique.GAS_CELL:
         return (True,)
-    if conditions.phase is not None or conditions.technique in (Technique.DISC, Technique.MULL, Technique.ATR,
-                                                                 Technique.DIFFUSE):
+    if conditions.phase is not None or conditions.technique in (
+        Technique.DISC,
+        Technique.MULL,
+        Technique.ATR,
+        Technique.DIFFUSE,
+    ):
         return (False,)
     return (False, True)
 
@@ -113,24 +117,50 @@ def scene_of(prepared: Prepared, bands: tuple[Band, ...], conditions: Conditions
         total = sum(sizes[b] for b in series)
         centre = sum(sizes[b] * b.position_cm1 for b in series) / total
         share = sizes[top] / strongest
-        clusters.append(Cluster(centre, series[-1].position_cm1 - series[0].position_cm1, share, level_of(share, params),
-                                tuple(series), series=True))
+        clusters.append(
+            Cluster(
+                centre,
+                series[-1].position_cm1 - series[0].position_cm1,
+                share,
+                level_of(share, params),
+                tuple(series),
+                series=True,
+            )
+        )
     taken: set[Band] = {band for cluster in clusters for band in cluster.members}
     for band in sorted(sizes, key=lambda b: -sizes[b]):
         if band in taken:
             continue
-        near = [other for other in sizes if other not in taken
-                and abs(other.position_cm1 - band.position_cm1) <= max(reach, 0.35 * min(band.fwhm_cm1, 120.0))
-                and (other is band or sizes[other] <= 0.8 * sizes[band] or gas)]
+        near = [
+            other
+            for other in sizes
+            if other not in taken
+            and abs(other.position_cm1 - band.position_cm1) <= max(reach, 0.35 * min(band.fwhm_cm1, 120.0))
+            and (other is band or sizes[other] <= 0.8 * sizes[band] or gas)
+        ]
         taken.update(near)
         share = sizes[band] / strongest if strongest > 0 else 0.0
-        clusters.append(Cluster(band.position_cm1, band.fwhm_cm1, share, level_of(share, params),
-                                tuple(sorted(near, key=lambda b: b.position_cm1))))
+        clusters.append(
+            Cluster(
+                band.position_cm1,
+                band.fwhm_cm1,
+                share,
+                level_of(share, params),
+                tuple(sorted(near, key=lambda b: b.position_cm1)),
+            )
+        )
     clusters.sort(key=lambda c: -c.share)
     noise = float(np.median(prepared.noise))
     limit = 6 * noise / strongest if strongest > 0 else 1.0
-    return Scene(tuple(clusters[:60]), bands, strongest, limit, phases,
-                 params.unknown_phase_widening_cm1 if len(phases) > 1 else 0.0, prepared)
+    return Scene(
+        tuple(clusters[:60]),
+        bands,
+        strongest,
+        limit,
+        phases,
+        params.unknown_phase_widening_cm1 if len(phases) > 1 else 0.0,
+        prepared,
+    )
 
 
 def _line_series(sizes: dict[Band, float], widest_cm1: float) -> list[list[Band]]:
@@ -187,8 +217,9 @@ def _widths(row: BandRow, scene: Scene) -> tuple[float, float]:
     return min(p[0] for p in pairs), max(p[1] for p in pairs)
 
 
-def explanation(row: BandRow, cluster: Cluster, windows: tuple[tuple[float, float], ...], scene: Scene,
-                params: MethodParams) -> float:
+def explanation(
+    row: BandRow, cluster: Cluster, windows: tuple[tuple[float, float], ...], scene: Scene, params: MethodParams
+) -> float:
     """Chance (0 to 0.97) that this row accounts for this cluster: place, shape and size all have to fit."""
     if (row.kind == "plateau") != cluster.plateau:
         # A broad O-H or N-H absorption reaches far; its tail may well be what a plateau window reads.
@@ -201,12 +232,15 @@ def explanation(row: BandRow, cluster: Cluster, windows: tuple[tuple[float, floa
         place = membership(cluster.position_cm1, windows, params.edge_softness_cm1)
     else:
         largest = max(_size(band) for band in cluster.members)
-        place = max(membership(band.position_cm1, windows, params.edge_softness_cm1) for band in cluster.members
-                    if _size(band) >= 0.6 * largest)
+        place = max(
+            membership(band.position_cm1, windows, params.edge_softness_cm1)
+            for band in cluster.members
+            if _size(band) >= 0.6 * largest
+        )
     if place < 0.05:
         return 0.0
     chances = LEVEL_CHANCES[row.strength]
-    at_least = sum(chances[cluster.level:])
+    at_least = sum(chances[cluster.level :])
     size = min(1.0, 0.05 + 2.2 * at_least)
     if scene.saturated:
         # The true height of the strongest band is unknown, so every share is too large and speaks against nothing.
@@ -251,8 +285,16 @@ def read_row(row: BandRow, scene: Scene, params: MethodParams) -> Reading:
             return Reading(row, windows, "not_readable", 0, 0.0, (), 0.0, 0.0)
         level = level_of(share, params)
         found = share >= 0.05
-        return Reading(row, windows, "found" if found else "missing", level if found else min(level, 1), share, (),
-                       1.0 if found else 0.0, _penalty(row, level if share >= 0.03 else 0, share))
+        return Reading(
+            row,
+            windows,
+            "found" if found else "missing",
+            level if found else min(level, 1),
+            share,
+            (),
+            1.0 if found else 0.0,
+            _penalty(row, level if share >= 0.03 else 0, share),
+        )
     best_share, best, credible = 0.0, None, 0.0
     hits: list[Band] = []
     for cluster in scene.clusters:
@@ -293,8 +335,17 @@ def read_row(row: BandRow, scene: Scene, params: MethodParams) -> Reading:
         penalty -= 1.5
     if readable < 0.6:
         penalty *= 0.3
-    return Reading(row, windows, "found", level, best_share, tuple(sorted(set(hits), key=lambda b: b.position_cm1)),
-                   credible, penalty, by_shoulder)
+    return Reading(
+        row,
+        windows,
+        "found",
+        level,
+        best_share,
+        tuple(sorted(set(hits), key=lambda b: b.position_cm1)),
+        credible,
+        penalty,
+        by_shoulder,
+    )
 
 
 def _penalty(row: BandRow, level: int, share: float) -> float:

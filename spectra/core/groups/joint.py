@@ -99,8 +99,9 @@ def weigh(scene: Scene, table: GroupTable, params: MethodParams) -> Posterior:
                 value = explanation(row, cluster, windows, scene, params)
                 if value > explains[i, j]:
                     explains[i, j] = value
-    priors = np.array([math.log(item.prior / (1 - item.prior)) for item in items]
-                      + [math.log(MOLECULE_PRIOR)] * len(molecules))
+    priors = np.array(
+        [math.log(item.prior / (1 - item.prior)) for item in items] + [math.log(MOLECULE_PRIOR)] * len(molecules)
+    )
     own = priors + np.array([missing[key] for key in ids])
     # A group none of whose windows exists in this phase cannot be weighed here at all.
     possible = np.array([any(r.windows for r in readings[key]) for key in ids])
@@ -141,12 +142,28 @@ def weigh(scene: Scene, table: GroupTable, params: MethodParams) -> Posterior:
         members = [k for k, i in enumerate(chosen) if ids[i] in wider.members]
         absent = float(weights[(sets[:, members].sum(axis=1) == 0)].sum()) if members else 1.0
         class_probability[wider.id] = 1 - absent
-    return Posterior(ids, probability, readings, missing, clusters, explains, class_probability,
-                     tuple(ids[i] for i, flag in zip(chosen, best, strict=True) if flag))
+    return Posterior(
+        ids,
+        probability,
+        readings,
+        missing,
+        clusters,
+        explains,
+        class_probability,
+        tuple(ids[i] for i, flag in zip(chosen, best, strict=True) if flag),
+    )
 
 
-def _add_kind(ids: tuple[str, ...], order: list[int], chosen: np.ndarray, sets: np.ndarray, weights: np.ndarray,
-              probability: np.ndarray, kind: str, general: str) -> None:
+def _add_kind(
+    ids: tuple[str, ...],
+    order: list[int],
+    chosen: np.ndarray,
+    sets: np.ndarray,
+    weights: np.ndarray,
+    probability: np.ndarray,
+    kind: str,
+    general: str,
+) -> None:
     """A group that is a kind of another (a lactone is an ester) raises the general one: either of them, not the sum."""
     a, b = ids.index(kind), ids.index(general)
     if a in order and b in order:

@@ -38,9 +38,17 @@ class GroupWeighing:
     probability: dict[str, float]  # uncalibrated; for the challenge set and its reliability table only
 
 
-def weigh_groups(prepared: Prepared, bands: tuple[Band, ...], table: GroupTable, conditions: Conditions,
-                 params: MethodParams, *, expected: Iterable[str] | None = None, forbidden: Iterable[str] = (),
-                 tolerated: Iterable[str] = ()) -> GroupWeighing:
+def weigh_groups(
+    prepared: Prepared,
+    bands: tuple[Band, ...],
+    table: GroupTable,
+    conditions: Conditions,
+    params: MethodParams,
+    *,
+    expected: Iterable[str] | None = None,
+    forbidden: Iterable[str] = (),
+    tolerated: Iterable[str] = (),
+) -> GroupWeighing:
     """Verdict, ledger and lane of every group of the table.
 
     expected : groups that the declaration has (None: nothing is declared); forbidden : groups it must not have;
@@ -75,16 +83,39 @@ def weigh_groups(prepared: Prepared, bands: tuple[Band, ...], table: GroupTable,
     for wider in table.classes:
         chance = posterior.class_probability[wider.id]
         probability[wider.id] = chance
-        claims.append(_class_claim(wider.id, wider.name, wider.members, wider.would_decide, chance, verdicts, posterior,
-                                   table, params, declared, barred))
+        claims.append(
+            _class_claim(
+                wider.id,
+                wider.name,
+                wider.members,
+                wider.would_decide,
+                chance,
+                verdicts,
+                posterior,
+                table,
+                params,
+                declared,
+                barred,
+            )
+        )
     findings = ()
     if len(phases_of(conditions)) > 1:
-        findings = (Finding("groups.phase_unknown", Severity.WARNING,
-                            "Neither phase nor technique is known, so the windows of liquids, solids and gases were all "
-                            f"used, widened by {params.unknown_phase_widening_cm1:g} cm-1; fewer groups can be decided.",
-                            remedy="Enter the phase or the technique."),)
-    return GroupWeighing(tuple(claims), tuple(lanes), {band: tuple(dict.fromkeys(ids)) for band, ids in used.items()},
-                         findings, probability)
+        findings = (
+            Finding(
+                "groups.phase_unknown",
+                Severity.WARNING,
+                "Neither phase nor technique is known, so the windows of liquids, solids and gases were all "
+                f"used, widened by {params.unknown_phase_widening_cm1:g} cm-1; fewer groups can be decided.",
+                remedy="Enter the phase or the technique.",
+            ),
+        )
+    return GroupWeighing(
+        tuple(claims),
+        tuple(lanes),
+        {band: tuple(dict.fromkeys(ids)) for band, ids in used.items()},
+        findings,
+        probability,
+    )
 
 
 def agreement(identifier: str, verdict: str, declared: frozenset[str] | None, barred: frozenset[str]) -> str:
@@ -120,15 +151,28 @@ def _sentence(reading: Reading) -> str:
         return f"{row.name}: a very broad absorption across {where}, {100 * reading.share:.0f} % of the strongest band."
     strongest = max(reading.bands, key=lambda b: min(b.height_absorbance, 3 * b.prominence_absorbance))
     extra = f" and {len(reading.bands) - 1} more" if len(reading.bands) > 1 else ""
-    doubt = " Only a shoulder, so it counts little." if reading.by_shoulder else (
-        " It is saturated: present, but its size is unknown." if strongest.kind == "saturated" else "")
-    return (f"{row.name}: band at {strongest.position_cm1:.1f} cm-1 ({LEVEL_NAMES[reading.level]}, {strongest.shape}, "
-            f"{strongest.height_absorbance:.3f} absorbance){extra}, window {where}.{doubt}")
+    doubt = (
+        " Only a shoulder, so it counts little."
+        if reading.by_shoulder
+        else (" It is saturated: present, but its size is unknown." if strongest.kind == "saturated" else "")
+    )
+    return (
+        f"{row.name}: band at {strongest.position_cm1:.1f} cm-1 ({LEVEL_NAMES[reading.level]}, {strongest.shape}, "
+        f"{strongest.height_absorbance:.3f} absorbance){extra}, window {where}.{doubt}"
+    )
 
 
 def _strength_word(strength: str) -> str:
-    return {"s": "strong", "m-s": "medium to strong", "m": "medium", "w-s": "weak to strong", "w-m": "weak to medium", "w": "weak",
-            "vw": "very weak", "v": "of varying strength"}[strength]
+    return {
+        "s": "strong",
+        "m-s": "medium to strong",
+        "m": "medium",
+        "w-s": "weak to strong",
+        "w-m": "weak to medium",
+        "w": "weak",
+        "vw": "very weak",
+        "v": "of varying strength",
+    }[strength]
 
 
 def usual_enough(reading: Reading, least: float = LEAST_USUAL_CHANCE) -> bool:
@@ -146,8 +190,11 @@ def _whole_pattern(readings: tuple[Reading, ...]) -> bool:
     for reading in readings:
         if reading.row.role != "supporting" and reading.windows:
             sets.setdefault(reading.row.set or reading.row.name, []).append(reading)
-    shown = [members for members in sets.values()
-             if any(r.state == "found" and not r.by_shoulder and usual_enough(r, LEAST_PATTERN_CHANCE) for r in members)]
+    shown = [
+        members
+        for members in sets.values()
+        if any(r.state == "found" and not r.by_shoulder and usual_enough(r, LEAST_PATTERN_CHANCE) for r in members)
+    ]
     places = {round(b.position_cm1, 1) for members in shown for r in members for b in r.bands}
     return len(shown) == len(sets) and len(shown) >= 3 and len(places) >= 3
 
@@ -171,7 +218,7 @@ def _lacks_a_diagnostic(readings: tuple[Reading, ...]) -> bool:
     return any(max(values) <= LACKING_PENALTY for values in sets.values())
 
 
-def _sets_found(readings: tuple[Reading, ...], role: str) -> tuple[bool, bool]:
+def _sets_found(readings: tuple[Reading, ...], role: str, least: float = LEAST_USUAL_CHANCE) -> tuple[bool, bool]:
     """(all found, all readable) over the rows of a role; one member is enough of a set of alternatives."""
     found, readable = True, True
     sets: dict[str, list[Reading]] = {}
@@ -180,7 +227,7 @@ def _sets_found(readings: tuple[Reading, ...], role: str) -> tuple[bool, bool]:
             continue
         sets.setdefault(reading.row.set or f"row {id(reading)}", []).append(reading)
     for members in sets.values():
-        good = [r for r in members if r.state == "found" and not r.by_shoulder and usual_enough(r)]
+        good = [r for r in members if r.state == "found" and not r.by_shoulder and usual_enough(r, least)]
         if not good:
             found = False
             if all(r.state == "not_readable" for r in members):
@@ -188,8 +235,15 @@ def _sets_found(readings: tuple[Reading, ...], role: str) -> tuple[bool, bool]:
     return found, readable
 
 
-def _judge(group: Group, posterior: Posterior, scene: Scene, table: GroupTable, params: MethodParams,
-           declared: frozenset[str] | None, barred: frozenset[str]) -> tuple[GroupClaim, float]:
+def _judge(
+    group: Group,
+    posterior: Posterior,
+    scene: Scene,
+    table: GroupTable,
+    params: MethodParams,
+    declared: frozenset[str] | None,
+    barred: frozenset[str],
+) -> tuple[GroupClaim, float]:
     index = posterior.ids.index(group.id)
     chance = float(posterior.probability[index])
     readings = posterior.readings[group.id]
@@ -197,8 +251,11 @@ def _judge(group: Group, posterior: Posterior, scene: Scene, table: GroupTable, 
     diagnostic = [r for r in here if r.row.role == "diagnostic"]
     found, readable = _sets_found(readings, "diagnostic")
     companions_found, companions_readable = _sets_found(readings, "companion")
-    against = [_sentence(r) for r in here
-               if r.state == "missing" and r.row.absence != "nothing" and not _covered_by_set(r, readings)]
+    against = [
+        _sentence(r)
+        for r in here
+        if r.state == "missing" and r.row.absence != "nothing" and not _covered_by_set(r, readings)
+    ]
     for_ = [_sentence(r) for r in here if r.state == "found"]
     unread = [_sentence(r) for r in here if r.state == "not_readable"]
     rivals = _rivals(group, index, posterior, table)
@@ -216,16 +273,28 @@ def _judge(group: Group, posterior: Posterior, scene: Scene, table: GroupTable, 
             against = ["It is not looked for in this phase: no window is known."]
         elif scene.strongest <= 0:
             against = ["The spectrum shows no band at all, so nothing can be weighed."]
-    elif (chance >= params.support_probability or (
-            chance >= params.pattern_probability and group.id in posterior.best_set and _whole_pattern(readings)
-            and _has_a_band_of_its_own(index, posterior))) \
-            and found and readable and (
-            companions_found or not companions_readable or _companion_shortfall(readings) > -0.8) \
-            and not _rests_on_one_fingerprint_band(group, readings) and not group.one_band_only:
+    elif (
+        (
+            chance >= params.support_probability
+            or (
+                chance >= params.pattern_probability
+                and group.id in posterior.best_set
+                and _whole_pattern(readings)
+                and _has_a_band_of_its_own(index, posterior)
+            )
+        )
+        and found
+        and readable
+        and (companions_found or not companions_readable or _companion_shortfall(readings) > -0.8)
+        and not _rests_on_one_fingerprint_band(group, readings)
+        and not group.one_band_only
+    ):
         verdict = "supported"
-    elif chance <= params.contradiction_probability and \
-            posterior.shortfall[group.id] <= -params.contradiction_evidence and (
-                _lacks_a_diagnostic(readings) or posterior.shortfall[group.id] <= MANIFOLD_SHORTFALL):
+    elif (
+        chance <= params.contradiction_probability
+        and posterior.shortfall[group.id] <= -params.contradiction_evidence
+        and (_lacks_a_diagnostic(readings) or posterior.shortfall[group.id] <= MANIFOLD_SHORTFALL)
+    ):
         verdict = "contradicted"
     else:
         verdict = "undecided"
@@ -233,20 +302,43 @@ def _judge(group: Group, posterior: Posterior, scene: Scene, table: GroupTable, 
     if group.id == "aromatic" and verdict == "supported":
         extra = substitution_note(scene)
         note = f"{extra} {note}".strip()
-    hazard = group.hazard if group.hazard and (verdict == "supported" or (
-        verdict == "undecided" and any(r.state == "found" for r in diagnostic) and chance > 0.05)) else None
-    would = () if verdict in ("supported", "contradicted") else tuple(
-        (*([f"Measure the missing region: {unread[0]}"] if unread and verdict == "not_examined" else []),
-         *group.would_decide))
+    hazard = (
+        group.hazard
+        if group.hazard
+        and (
+            verdict == "supported"
+            or (verdict == "undecided" and any(r.state == "found" for r in diagnostic) and chance > 0.05)
+        )
+        else None
+    )
+    would = (
+        ()
+        if verdict in ("supported", "contradicted")
+        else (
+            *([f"Measure the missing region: {unread[0]}"] if unread and verdict == "not_examined" else []),
+            *group.would_decide,
+        )
+    )
     against += unread
-    return GroupClaim(group.id, group.name, verdict, None, weight_in_words(verdict, chance),
-                      agreement(group.id, verdict, declared, barred), tuple(for_), tuple(against), would, hazard,
-                      note), chance
+    return GroupClaim(
+        group.id,
+        group.name,
+        verdict,
+        None,
+        weight_in_words(verdict, chance),
+        agreement(group.id, verdict, declared, barred),
+        tuple(for_),
+        tuple(against),
+        would,
+        hazard,
+        note,
+    ), chance
 
 
 def _covered_by_set(reading: Reading, readings: tuple[Reading, ...]) -> bool:
     return bool(reading.row.set) and any(
-        other.row.set == reading.row.set and other.state == "found" for other in readings)
+        other.row.set == reading.row.set and other.state == "found" for other in readings
+    )
 
 
 def _companion_shortfall(readings: tuple[Reading, ...]) -> float:
@@ -257,7 +349,8 @@ def _rests_on_one_fingerprint_band(group: Group, readings: tuple[Reading, ...]) 
     """Below 1500 cm-1 a group is never called from one band."""
     seen = [r for r in readings if r.state == "found" and r.row.role != "supporting"]
     if any(max(b.position_cm1 for b in r.bands) >= FINGERPRINT_CM1 for r in seen if r.bands) or any(
-            r.row.kind == "plateau" for r in seen):
+        r.row.kind == "plateau" for r in seen
+    ):
         return False
     return len({round(b.position_cm1) for r in seen for b in r.bands}) < 2
 
@@ -279,8 +372,19 @@ def _rivals(group: Group, index: int, posterior: Posterior, table: GroupTable) -
 
 def _never(group: Group, declared: frozenset[str] | None, barred: frozenset[str]) -> GroupClaim:
     wanted = (declared is not None and group.id in declared) or group.id in barred
-    return GroupClaim(group.id, group.name, "undecided", None, "open", "neutral", (), (group.note,), group.would_decide,
-                      group.hazard if wanted else None, group.note)
+    return GroupClaim(
+        group.id,
+        group.name,
+        "undecided",
+        None,
+        "open",
+        "neutral",
+        (),
+        (group.note,),
+        group.would_decide,
+        group.hazard if wanted else None,
+        group.note,
+    )
 
 
 def _lane(group: Group, readings: tuple[Reading, ...], verdict: str) -> Lane:
@@ -293,16 +397,27 @@ def _lane(group: Group, readings: tuple[Reading, ...], verdict: str) -> Lane:
     return Lane(group.id, group.name, verdict, tuple(windows))
 
 
-def _class_claim(identifier: str, name: str, members: tuple[str, ...], would: tuple[str, ...], chance: float,
-                 verdicts: dict[str, str], posterior: Posterior, table: GroupTable, params: MethodParams,
-                 declared: frozenset[str] | None, barred: frozenset[str]) -> GroupClaim:
+def _class_claim(
+    identifier: str,
+    name: str,
+    members: tuple[str, ...],
+    would: tuple[str, ...],
+    chance: float,
+    verdicts: dict[str, str],
+    posterior: Posterior,
+    table: GroupTable,
+    params: MethodParams,
+    declared: frozenset[str] | None,
+    barred: frozenset[str],
+) -> GroupClaim:
     names = {item.id: item.name for item in table.groups}
     supported = [names[m] for m in members if verdicts.get(m) == "supported"]
     open_ = [m for m in members if verdicts.get(m) == "undecided"]
     shut = [m for m in members if verdicts.get(m) == "contradicted"]
     unseen = [m for m in members if verdicts.get(m) == "not_examined"]
-    likely = sorted((m for m in members if m in posterior.ids),
-                    key=lambda m: -posterior.probability[posterior.ids.index(m)])[:3]
+    likely = sorted(
+        (m for m in members if m in posterior.ids), key=lambda m: -posterior.probability[posterior.ids.index(m)]
+    )[:3]
     for_, against = [], []
     if supported:
         for_.append(f"Supported among its members: {', '.join(supported)}.")
@@ -315,23 +430,37 @@ def _class_claim(identifier: str, name: str, members: tuple[str, ...], would: tu
         for_.append(f"Its bands are there; which member it is stays open ({', '.join(names[m] for m in likely)}).")
     elif len(unseen) == len(members):
         verdict = "not_examined"
-    elif shut and not open_ and len(shut) >= len(unseen):
-        verdict = "contradicted"
-    elif chance <= params.contradiction_probability and shut and all(
-            posterior.probability[posterior.ids.index(m)] <= params.contradiction_probability for m in open_) and all(
-            posterior.shortfall[m] < -0.7 for m in open_):
+    elif (shut and not open_ and len(shut) >= len(unseen)) or (
+        chance <= params.contradiction_probability
+        and shut
+        and all(posterior.probability[posterior.ids.index(m)] <= params.contradiction_probability for m in open_)
+        and all(posterior.shortfall[m] < -0.7 for m in open_)
+    ):
         verdict = "contradicted"
     else:
         verdict = "undecided"
     if open_ and verdict != "contradicted":
         against.append(f"Undecided: {', '.join(names[m] for m in open_)}.")
     wanted = None if declared is None else (declared | {identifier} if declared & set(members) else declared)
-    return GroupClaim(identifier, name, verdict, None, weight_in_words(verdict, chance),
-                      agreement(identifier, verdict, wanted, barred), tuple(for_), tuple(against),
-                      () if verdict in ("supported", "contradicted") else would, None, "Wider class.")
+    return GroupClaim(
+        identifier,
+        name,
+        verdict,
+        None,
+        weight_in_words(verdict, chance),
+        agreement(identifier, verdict, wanted, barred),
+        tuple(for_),
+        tuple(against),
+        () if verdict in ("supported", "contradicted") else would,
+        None,
+        "Wider class.",
+    )
 
 
 def _member_seen(likely: list[str], posterior: Posterior) -> bool:
     """At least one member that is likely by itself shows all its diagnostic bands outright."""
-    return any(_sets_found(posterior.readings[m], "diagnostic")[0]
-               and posterior.probability[posterior.ids.index(m)] >= LIKELY_MEMBER for m in likely)
+    return any(
+        _sets_found(posterior.readings[m], "diagnostic", LEAST_PATTERN_CHANCE)[0]
+        and posterior.probability[posterior.ids.index(m)] >= LIKELY_MEMBER
+        for m in likely
+    )

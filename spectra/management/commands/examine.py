@@ -40,8 +40,14 @@ class Command(BaseCommand):
     def add_arguments(self, parser):
         parser.add_argument("files", nargs="+", metavar="FILE", help="JCAMP-DX or delimited text")
         parser.add_argument("--declared", type=Path, metavar="FILE", help="reference spectrum of the declared material")
-        parser.add_argument("--watch", type=Path, metavar="FILE", action="append", default=[],
-                            help="spectrum of a contaminant to look for; may be repeated")
+        parser.add_argument(
+            "--watch",
+            type=Path,
+            metavar="FILE",
+            action="append",
+            default=[],
+            help="spectrum of a contaminant to look for; may be repeated",
+        )
         parser.add_argument("--smiles", metavar="TEXT", help="declared structure")
         parser.add_argument("--x-unit", choices=[unit.value for unit in AxisUnit], help="unit of the axis")
         parser.add_argument("--ordinate", choices=ORDINATES, help="what the numbers mean")
@@ -52,18 +58,27 @@ class Command(BaseCommand):
 
     def handle(self, *args, **options):
         if not getattr(settings, "EXAMINE", True):
-            self.stderr.write("examine is switched off here (BANDLEDGER_EXAMINE): bring spectra in through the web pages.")
+            self.stderr.write(
+                "examine is switched off here (BANDLEDGER_EXAMINE): bring spectra in through the web pages."
+            )
             raise SystemExit(2)
         technique = Technique(options["technique"]) if options["technique"] else None
         request = Request(
             options=ReadOptions(
                 x_unit=AxisUnit(options["x_unit"]) if options["x_unit"] else None,
                 ordinate=Ordinate(options["ordinate"]) if options["ordinate"] else None,
-                columns=options["columns"], technique=technique),
+                columns=options["columns"],
+                technique=technique,
+            ),
             conditions=Conditions(technique=technique, phase=Phase(options["phase"]) if options["phase"] else None),
-            declared=options["declared"], watch=tuple(options["watch"]), smiles=options["smiles"])
+            declared=options["declared"],
+            watch=tuple(options["watch"]),
+            smiles=options["smiles"],
+        )
         if request.watch and not request.declared:
-            self.stderr.write("--watch needs --declared: contaminants are looked for in what the reference leaves over.")
+            self.stderr.write(
+                "--watch needs --declared: contaminants are looked for in what the reference leaves over."
+            )
             raise SystemExit(2)
         try:
             examiner = Examiner(request)
