@@ -80,17 +80,20 @@ class UploadForm(forms.Form):
 
 
 class AnswerForm(forms.Form):
-    """The answer to what a file leaves open: its axis unit, its ordinate, or which columns are spectra."""
+    """The answer to what a file leaves open: its axis unit, its ordinate, or which columns are spectra.
+
+    `question` is what the reader asked. A file that does not name its axis seldom names its ordinate either, so that
+    may be answered in the same step.
+    """
 
     x_unit = forms.ChoiceField(
         label="The first column is in",
-        choices=[("", "not needed"), ("cm-1", "cm⁻¹"), ("um", "micrometres"), ("nm", "nanometres")],
-        required=False,
+        choices=[("", "choose"), ("cm-1", "cm⁻¹"), ("um", "micrometres"), ("nm", "nanometres")],
     )
     ordinate = forms.ChoiceField(
         label="The values are",
         choices=[
-            ("", "not needed"),
+            ("", "as the file says"),
             ("absorbance", "absorbance"),
             ("transmittance", "transmittance as a fraction (1 is everything)"),
             ("percent_transmittance", "transmittance in per cent"),
@@ -100,14 +103,21 @@ class AnswerForm(forms.Form):
     )
     columns = forms.CharField(
         label="Columns that are spectra",
-        required=False,
         help_text="Their numbers, counted from the left; column 1 holds the axis. For example 2, 3.",
     )
 
+    ASKED = {"x_unit": ("x_unit", "ordinate"), "ordinate": ("ordinate",), "columns": ("columns",)}
+
+    def __init__(self, *args, question: str, **kwargs):
+        super().__init__(*args, **kwargs)
+        for name in set(self.fields) - set(self.ASKED.get(question, ())):
+            del self.fields[name]
+        if question == "ordinate":
+            self.fields["ordinate"].required = True
+            self.fields["ordinate"].choices = [("", "choose"), *self.fields["ordinate"].choices[1:]]
+
     def clean_columns(self):
         text = self.cleaned_data["columns"].strip()
-        if not text:
-            return []
         parts = re.split(r"[,;\s]+", text)
         if not all(part.isdigit() and 0 < int(part) < 1000 for part in parts):
             raise forms.ValidationError("Write column numbers, for example 2, 3.")

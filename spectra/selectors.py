@@ -185,7 +185,9 @@ def sample(pk: int) -> Sample:
 
 def find_samples(*, text: str = "", before_pk: int | None = None, limit: int = 50) -> list[Sample]:
     """Samples whose number, lot, supplier or declared name contains each of the words; newest first, keyset pages."""
-    rows = Sample.objects.select_related("delivery__material_version__material").prefetch_related("examinations")
+    rows = Sample.objects.select_related("delivery__material_version__material").prefetch_related(
+        "examinations", "containers"
+    )
     for word in text.split():
         rows = rows.filter(
             Q(code__icontains=word)

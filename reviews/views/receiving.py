@@ -189,7 +189,7 @@ def _sample_page(
                 {
                     "upload": upload,
                     "url": reverse("reviews:answer_upload", args=[upload.pk]),
-                    "form": (answer_forms or {}).get(upload.pk) or AnswerForm(initial=upload.answers),
+                    "form": (answer_forms or {}).get(upload.pk) or AnswerForm(initial=upload.answers, question=upload.question),
                 }
                 for upload in waiting
             ]
@@ -241,7 +241,7 @@ def upload(request: HttpRequest, pk: int) -> HttpResponse:
             brought = uploads.bring_file(
                 examination_id=pk, by=request.user, file_name=file.name or "", data=file.read(), facts=facts
             )
-        except (BadInput, DomainError) as error:
+        except DomainError as error:
             refused.append(
                 {"file": uploads.clean_file_name(file.name or ""), "message": error.message, "remedy": error.remedy}
             )
@@ -260,7 +260,12 @@ def upload(request: HttpRequest, pk: int) -> HttpResponse:
         else:
             messages.warning(request, f"{brought.file_name} needs an answer before it can be read: see below.")
     if refused:
-        return _sample_page(request, _sample_of(examination), refused=refused, status=422)
+        response = _sample_page(request, _sample_of(examination), refused=refused, status=422)
+        if read:
+            # The page loads itself anew when the analysis of the others ends: the refusals have to be there then too.
+            for item in refused:
+                messages.error(request, f"{item['file']} was refused: {item['message']} {item['remedy']}".strip())
+        return response
     if read:
         messages.success(request, f"{read} file{'s' if read > 1 else ''} read and stored.")
     return redirect(presenting.sample_url(examination))
@@ -269,8 +274,8 @@ def upload(request: HttpRequest, pk: int) -> HttpResponse:
 @page_for(*spectra_permissions.READERS)
 @require_POST
 def answer_upload(request: HttpRequest, pk: int) -> HttpResponse:
-    form = AnswerForm(request.POST)
     waiting = spectra_selectors.upload(pk)
+    form = AnswerForm(request.POST, question=waiting.question)
     if form.is_valid():
         try:
             answered = uploads.answer_upload(

@@ -122,7 +122,7 @@ def _approve(row: InterpretationVersion, blockers: list[str], given: dict | None
         "url": reverse("reviews:approve", args=[row.pk]),
         "ready": not blockers,
         "why_not": " ".join(blockers),
-        "form": SignatureForm(prefix="approve"),
+        "form": SignatureForm(prefix="approve", initial={"content_hash": row.content_hash}),
         "comment": "",
         "errors": {},
     } | (given or {})
@@ -132,7 +132,7 @@ def _reject(row: InterpretationVersion, points: list[dict], given: dict | None) 
     typed = (given or {}).get("typed", {})
     return {
         "url": reverse("reviews:reject", args=[row.pk]),
-        "form": SignatureForm(prefix="reject"),
+        "form": SignatureForm(prefix="reject", initial={"content_hash": row.content_hash}),
         "reasons": [
             {"id": point["id"], "title": point["title"], "typed": typed.get(point["id"], "")} for point in points
         ],
@@ -144,7 +144,7 @@ def _reject(row: InterpretationVersion, points: list[dict], given: dict | None) 
 def _withdraw(row: InterpretationVersion, given: dict | None) -> dict[str, object]:
     return {
         "url": reverse("reviews:withdraw", args=[row.pk]),
-        "form": SignatureForm(prefix="withdraw"),
+        "form": SignatureForm(prefix="withdraw", initial={"content_hash": row.content_hash}),
         "reason": "",
         "errors": {},
     } | (given or {})

@@ -24,7 +24,22 @@ INK = """() => {
   });
   return ink;
 }"""
-OVERFLOW = "() => document.documentElement.scrollWidth - document.documentElement.clientWidth"
+# How far the page, or any part that is not in a box that scrolls by itself, reaches over the right edge.
+OVERFLOW = """() => {
+  const width = document.documentElement.clientWidth;
+  const boxed = (element) => {
+    for (let box = element.parentElement; box && box !== document.body; box = box.parentElement) {
+      if (getComputedStyle(box).overflowX !== "visible") return true;
+    }
+    return false;
+  };
+  let over = document.documentElement.scrollWidth - width;
+  document.querySelectorAll("body *").forEach((element) => {
+    const { right, width: wide, height } = element.getBoundingClientRect();
+    if (wide > 1 && height > 1 && right - width > over && !boxed(element)) over = right - width;
+  });
+  return Math.round(over);
+}"""
 
 
 class Person:
@@ -42,7 +57,7 @@ class Person:
     def _listen(self, message) -> None:
         # A refused form is answered with 4xx, which the browser notes as an error of loading.
         answered = re.match(r"Failed to load resource: the server responded with a status of 4", message.text)
-        if message.type in ("error", "warning") and not answered:
+        if message.type == "error" and not answered:
             self.complaints.append(f"{message.type}: {message.text}")
 
     def _watch(self, request) -> None:

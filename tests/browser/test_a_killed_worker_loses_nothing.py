@@ -17,6 +17,7 @@ def bring_in(laboratory: LiveLaboratory) -> None:
         "-c",
         f"""
 import os
+from datetime import date
 os.environ.setdefault("DJANGO_SETTINGS_MODULE", "labsite.settings")
 import django
 django.setup()
@@ -29,7 +30,7 @@ material = MaterialVersion.objects.get(material__code="EAC")
 for number in range({LOTS}):
     delivery = receiving.register_delivery(
         by=analyst, material_version_id=material.pk, supplier="Supplier North", lot=f"K-{{number}}",
-        received_on="2026-03-02",
+        received_on=date(2026, 3, 2),
     )
     builders.upload(delivery.examinations.get(), analyst, data=builders.jcamp_file(seed=number))
 """,
@@ -91,8 +92,6 @@ def test_an_analysis_whose_worker_is_killed_ends_once_and_by_itself(laboratory):
     )[0]
     assert attempt == 2
     assert len(result) == 64
-    assert laboratory.rows("SELECT count(*) FROM spectra_analysis WHERE id > ? AND attempt = 0", 0) == [(0,)]
-
     events = dict(
         laboratory.rows(
             "SELECT event, count(*) FROM trail_trailentry WHERE subject_kind = 'examination' AND subject_id = ?"

@@ -97,7 +97,7 @@ def uploads(analyst: Person, measured: Path, tmp_path: Path) -> None:
     analyst.sees("1 file read and stored.")
     row = page.locator("tr", has_text="isopropanol.jdx")
     expect(row.locator("progress")).to_be_visible()  # the real worker is at it; the row asks for itself
-    expect(row).to_contain_text("done", timeout=30_000)
+    expect(row).to_contain_text("analysed", timeout=30_000)
 
     analyst.drops("[data-drop]", measured)
     page.get_by_role("button", name="Upload and analyse").click()

@@ -29,7 +29,8 @@ class Growing:
     def grow(self) -> None:
         self.helpings += 1
         n, cast, lab = self.helpings, self.cast, self.lab
-        row = builders.examination(cast, lab, lot=f"files-{n}", containers_total=3, sampled_containers=(1, 2, 3))
+        delivery = builders.delivery(cast, lab, lot=f"files-{n}", containers_total=3, sampled_containers=(1, 2, 3))
+        row = delivery.examinations.order_by("pk").first()
         builders.upload(row, cast.analyst, data=builders.jcamp_file(seed=n), file_name=f"waiting-{n}.dx")
         builders.upload(
             builders.examination(cast, lab, lot=f"ask-{n}"), cast.analyst,
@@ -65,7 +66,7 @@ def growing(cast, monkeypatch) -> Growing:
 def queries(growing: Growing, person: str, url: str) -> list[str]:
     client = signed_in(growing.cast[person])
     client.get(url)  # what is asked for once in a process is not counted
-    with CaptureQueriesContext(connection, ) as context:
+    with CaptureQueriesContext(connection) as context:
         response = client.get(url)
         assert response.status_code == 200
     return [query["sql"] for query in context.captured_queries]

@@ -29,6 +29,7 @@ from spectra.core.params import MethodParams
 
 TELLING_REGIONS_CM1 = ((1640.0, 1850.0), (2050.0, 2300.0), (3150.0, 3720.0))
 SILENT_REGION_CM1 = (2050.0, 2300.0)  # hardly any skeleton or overtone band lies here
+PLATEAU_LEAKS = (1.0, 0.5, 0.08, 0.03, 0.01)  # hardly anything but acid and ammonium hydrogen bonds absorbs like that
 DOMINANT_SHARE = 0.9
 SAME_CLASS_PENALTY = 2.0
 NEED_PENALTY = 4.0
@@ -65,6 +66,8 @@ def _subsets(count: int, largest: int) -> np.ndarray:
 
 def leak_of(cluster: Cluster, params: MethodParams) -> float:
     """Chance that a band of this size comes from nothing in the table (skeleton, overtone, combination)."""
+    if cluster.plateau:
+        return PLATEAU_LEAKS[cluster.level]
     leak = params.explanation_leaks[cluster.level]
     if cluster.level >= 3 and any(low <= cluster.position_cm1 <= high for low, high in TELLING_REGIONS_CM1):
         leak *= 0.3
