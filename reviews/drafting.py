@@ -1,8 +1,8 @@
 """From the result of an analysis to draft claims: the interface between computing and judging. Pure and frozen.
 
 `draft_claims(result, ...)` reads the result's JSON form alone. Each claim carries what was computed, as it was
-computed; what a person makes of it is written beside it, never over it. Keys are stable within an interpretation, so that the
-next version of a claim can be laid beside the last one.
+computed; what a person makes of it is written beside it, never over it. Keys are stable within an interpretation, so
+that the next version of a claim can be laid beside the last one.
 """
 
 from __future__ import annotations
@@ -112,11 +112,14 @@ def _groups(result: Mapping) -> list[DraftClaim]:
         (result.get("declared") or {}).get("expected_groups", ())
     )
     forbidden = set((result.get("declared") or {}).get("forbidden_groups", ()))
+    supported = {item["group"] for item in result.get("groups", ()) if item["verdict"] == "supported"}
     claims = []
     for item in result.get("groups", ()):
         group, verdict = item["group"], item["verdict"]
         spoken_of = group in expected or group in forbidden
         # A hazard is shown on evidence that nothing speaks against: better once too often than unseen.
+        if not spoken_of and supported & set(item.get("members", ())):
+            continue  # the group itself is claimed: its wider class says nothing more
         alarming = bool(item.get("hazard")) and verdict == "undecided" and not item.get("against")
         if verdict != "supported" and not spoken_of and not alarming:
             continue

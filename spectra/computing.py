@@ -125,7 +125,7 @@ def compute(analysis: Analysis, *, progress: Callable[[str, float], None] | None
         table=parsed_table(analysis.group_table.digest, analysis.group_table.text),
         reference=reference,
         watch=tuple(watch),
-        smiles=material.smiles or None,
+        smiles=material.smiles or material.repeat_unit or None,
         expected_groups=tuple(material.expected_groups),
         forbidden_groups=tuple(material.forbidden_groups),
         progress=progress,

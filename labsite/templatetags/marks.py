@@ -114,7 +114,9 @@ def mark_legend() -> SafeString:
     parts += [
         format_html(
             '<span class="mark agrees-{}"><span class="mark-plate">{}</span><span class="mark-word">{}</span></span>',
-            agrees, glyph("present"), word,
+            agrees,
+            glyph("present"),
+            word,
         )
         for agrees, word in AGREEMENT.items()
     ]

@@ -284,9 +284,7 @@ def submit(request: HttpRequest, pk: int) -> HttpResponse:
     row = selectors.version(pk)
     permissions.require(request.user, row, Action.SUBMIT)
     points, _document, content_hash = drafts.preview(row)
-    form = SignatureForm(
-        request.POST if request.method == "POST" else None, initial={"content_hash": content_hash}
-    )
+    form = SignatureForm(request.POST if request.method == "POST" else None, initial={"content_hash": content_hash})
     if form.is_valid():
         try:
             proof = signing.prove(request, password=form.cleaned_data["password"])

@@ -189,7 +189,8 @@ def _sample_page(
                 {
                     "upload": upload,
                     "url": reverse("reviews:answer_upload", args=[upload.pk]),
-                    "form": (answer_forms or {}).get(upload.pk) or AnswerForm(initial=upload.answers, question=upload.question),
+                    "form": (answer_forms or {}).get(upload.pk)
+                    or AnswerForm(initial=upload.answers, question=upload.question),
                 }
                 for upload in waiting
             ]

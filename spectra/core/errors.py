@@ -8,6 +8,8 @@ from spectra.core.types import Problem
 class CoreError(ValueError):
     """Input that the core cannot work with; `problem` says what, where and what to do about it."""
 
-    def __init__(self, code: str, message: str, *, line: int | None = None, remedy: str = "", question: str | None = None):
+    def __init__(
+        self, code: str, message: str, *, line: int | None = None, remedy: str = "", question: str | None = None
+    ):
         super().__init__(message)
         self.problem = Problem(code=code, message=message, line=line, remedy=remedy, question=question)

@@ -316,7 +316,7 @@ def _finding(item: Finding) -> dict[str, object]:
 def _structure_section(declared: dict[str, object], weighing: GroupWeighing) -> dict[str, object]:
     checked: structures.Structure = declared["structure"]  # type: ignore[assignment]
     expected = set(declared["groups"])  # type: ignore[arg-type]
-    classes = {claim.group for claim in weighing.claims if claim.note == "Wider class."}
+    classes = {claim.group for claim in weighing.claims if claim.members}
     tolerated = structures.tolerated_groups(expected)
     contradictions = []
     for claim in weighing.claims:

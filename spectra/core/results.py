@@ -117,6 +117,7 @@ class GroupClaim:
     would_decide: tuple[str, ...]
     hazard: str | None = None
     note: str = ""
+    members: tuple[str, ...] = ()  # of a wider class: the groups that it stands for
 
 
 @dataclass(frozen=True)

@@ -78,7 +78,9 @@ class Problem:
     message: str
     line: int | None = None
     remedy: str = ""
-    question: str | None = None  # None: refused; "x_unit", "ordinate" or "columns": the same bytes read once it is answered
+    question: str | None = (
+        None  # None: refused; "x_unit", "ordinate" or "columns": the same bytes read once it is answered
+    )
 
 
 @dataclass(frozen=True)

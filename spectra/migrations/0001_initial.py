@@ -6,604 +6,1243 @@ from django.db import migrations, models
 
 
 class Migration(migrations.Migration):
-
     initial = True
 
     dependencies = [
-        ('signing', '0001_initial'),
+        ("signing", "0001_initial"),
         migrations.swappable_dependency(settings.AUTH_USER_MODEL),
     ]
 
     operations = [
         migrations.CreateModel(
-            name='Counter',
+            name="Counter",
             fields=[
-                ('series', models.CharField(max_length=20, primary_key=True, serialize=False)),
-                ('last', models.PositiveIntegerField(default=0)),
+                ("series", models.CharField(max_length=20, primary_key=True, serialize=False)),
+                ("last", models.PositiveIntegerField(default=0)),
             ],
         ),
         migrations.CreateModel(
-            name='Instrument',
+            name="Instrument",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('code', models.CharField(max_length=40, unique=True)),
-                ('name', models.CharField(max_length=200)),
-                ('serial', models.CharField(blank=True, max_length=80)),
-                ('in_service', models.BooleanField(default=True)),
-                ('registered_at', models.DateTimeField()),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("code", models.CharField(max_length=40, unique=True)),
+                ("name", models.CharField(max_length=200)),
+                ("serial", models.CharField(blank=True, max_length=80)),
+                ("in_service", models.BooleanField(default=True)),
+                ("registered_at", models.DateTimeField()),
             ],
         ),
         migrations.CreateModel(
-            name='Material',
+            name="Material",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('code', models.CharField(max_length=40, unique=True)),
-                ('created_at', models.DateTimeField()),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("code", models.CharField(max_length=40, unique=True)),
+                ("created_at", models.DateTimeField()),
             ],
         ),
         migrations.CreateModel(
-            name='Analysis',
+            name="Analysis",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('queued', 'waiting'), ('running', 'running'), ('done', 'done'), ('failed', 'failed')], default='queued', max_length=10)),
-                ('step', models.CharField(blank=True, max_length=80)),
-                ('progress_percent', models.PositiveSmallIntegerField(default=0)),
-                ('attempt', models.PositiveSmallIntegerField(default=0)),
-                ('worker', models.CharField(blank=True, max_length=120)),
-                ('worker_pid', models.PositiveIntegerField(blank=True, null=True)),
-                ('heartbeat', models.PositiveBigIntegerField(default=0)),
-                ('queued_at', models.DateTimeField()),
-                ('started_at', models.DateTimeField(blank=True, null=True)),
-                ('finished_at', models.DateTimeField(blank=True, null=True)),
-                ('problem_code', models.CharField(blank=True, max_length=80)),
-                ('problem_text', models.TextField(blank=True)),
-                ('result', models.BinaryField(blank=True, null=True)),
-                ('result_digest', models.CharField(blank=True, max_length=64)),
-                ('curves_sha256', models.CharField(blank=True, max_length=64)),
-                ('core_version', models.CharField(blank=True, max_length=40)),
-                ('environment', models.JSONField(blank=True, default=dict)),
-                ('queued_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("queued", "waiting"), ("running", "running"), ("done", "done"), ("failed", "failed")],
+                        default="queued",
+                        max_length=10,
+                    ),
+                ),
+                ("step", models.CharField(blank=True, max_length=80)),
+                ("progress_percent", models.PositiveSmallIntegerField(default=0)),
+                ("attempt", models.PositiveSmallIntegerField(default=0)),
+                ("worker", models.CharField(blank=True, max_length=120)),
+                ("worker_pid", models.PositiveIntegerField(blank=True, null=True)),
+                ("heartbeat", models.PositiveBigIntegerField(default=0)),
+                ("queued_at", models.DateTimeField()),
+                ("started_at", models.DateTimeField(blank=True, null=True)),
+                ("finished_at", models.DateTimeField(blank=True, null=True)),
+                ("problem_code", models.CharField(blank=True, max_length=80)),
+                ("problem_text", models.TextField(blank=True)),
+                ("result", models.BinaryField(blank=True, null=True)),
+                ("result_digest", models.CharField(blank=True, max_length=64)),
+                ("curves_sha256", models.CharField(blank=True, max_length=64)),
+                ("core_version", models.CharField(blank=True, max_length=40)),
+                ("environment", models.JSONField(blank=True, default=dict)),
+                (
+                    "queued_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
             options={
-                'verbose_name_plural': 'analyses',
+                "verbose_name_plural": "analyses",
             },
         ),
         migrations.CreateModel(
-            name='Delivery',
+            name="Delivery",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('code', models.CharField(max_length=20, unique=True)),
-                ('supplier', models.CharField(max_length=120)),
-                ('lot', models.CharField(max_length=80)),
-                ('received_on', models.DateField()),
-                ('due_on', models.DateField(blank=True, null=True)),
-                ('priority', models.PositiveSmallIntegerField(choices=[(1, 'urgent'), (2, 'normal'), (3, 'low')], default=2)),
-                ('containers_total', models.PositiveIntegerField()),
-                ('containers_sampled', models.PositiveIntegerField()),
-                ('sampling_note', models.CharField(blank=True, max_length=300)),
-                ('registered_at', models.DateTimeField()),
-                ('registered_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("code", models.CharField(max_length=20, unique=True)),
+                ("supplier", models.CharField(max_length=120)),
+                ("lot", models.CharField(max_length=80)),
+                ("received_on", models.DateField()),
+                ("due_on", models.DateField(blank=True, null=True)),
+                (
+                    "priority",
+                    models.PositiveSmallIntegerField(choices=[(1, "urgent"), (2, "normal"), (3, "low")], default=2),
+                ),
+                ("containers_total", models.PositiveIntegerField()),
+                ("containers_sampled", models.PositiveIntegerField()),
+                ("sampling_note", models.CharField(blank=True, max_length=300)),
+                ("registered_at", models.DateTimeField()),
+                (
+                    "registered_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
             options={
-                'verbose_name_plural': 'deliveries',
+                "verbose_name_plural": "deliveries",
             },
         ),
         migrations.CreateModel(
-            name='Container',
+            name="Container",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('number', models.PositiveIntegerField()),
-                ('label', models.CharField(blank=True, max_length=80)),
-                ('delivery', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='containers', to='spectra.delivery')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("number", models.PositiveIntegerField()),
+                ("label", models.CharField(blank=True, max_length=80)),
+                (
+                    "delivery",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="containers", to="spectra.delivery"
+                    ),
+                ),
             ],
             options={
-                'ordering': ['number'],
+                "ordering": ["number"],
             },
         ),
         migrations.CreateModel(
-            name='Examination',
+            name="Examination",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('code', models.CharField(max_length=20, unique=True)),
-                ('opened_at', models.DateTimeField()),
-                ('delivery', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='examinations', to='spectra.delivery')),
-                ('opened_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("code", models.CharField(max_length=20, unique=True)),
+                ("opened_at", models.DateTimeField()),
+                (
+                    "delivery",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="examinations", to="spectra.delivery"
+                    ),
+                ),
+                (
+                    "opened_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
         ),
         migrations.CreateModel(
-            name='Contribution',
+            name="Contribution",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('kind', models.CharField(choices=[('prepared', 'prepared the sample'), ('measured', 'measured the spectrum'), ('uploaded', 'uploaded a file'), ('edited_band', 'edited a band'), ('excluded', 'excluded a spectrum'), ('changed_role', "changed a spectrum's role"), ('claimed', 'made or changed a claim'), ('concluded', 'wrote the conclusion'), ('answered', 'answered a reviewer')], max_length=20)),
-                ('at', models.DateTimeField()),
-                ('user', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('examination', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='contributions', to='spectra.examination')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "kind",
+                    models.CharField(
+                        choices=[
+                            ("prepared", "prepared the sample"),
+                            ("measured", "measured the spectrum"),
+                            ("uploaded", "uploaded a file"),
+                            ("edited_band", "edited a band"),
+                            ("excluded", "excluded a spectrum"),
+                            ("changed_role", "changed a spectrum's role"),
+                            ("claimed", "made or changed a claim"),
+                            ("concluded", "wrote the conclusion"),
+                            ("answered", "answered a reviewer"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                ("at", models.DateTimeField()),
+                (
+                    "user",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+                (
+                    "examination",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="contributions",
+                        to="spectra.examination",
+                    ),
+                ),
             ],
         ),
         migrations.CreateModel(
-            name='GroupFinding',
+            name="GroupFinding",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('group', models.CharField(max_length=40)),
-                ('verdict', models.CharField(max_length=20)),
-                ('agrees', models.CharField(max_length=10)),
-                ('analysis', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='group_findings', to='spectra.analysis')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("group", models.CharField(max_length=40)),
+                ("verdict", models.CharField(max_length=20)),
+                ("agrees", models.CharField(max_length=10)),
+                (
+                    "analysis",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="group_findings",
+                        to="spectra.analysis",
+                    ),
+                ),
             ],
         ),
         migrations.CreateModel(
-            name='GroupTable',
+            name="GroupTable",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('draft', 'draft'), ('approved', 'approved'), ('retired', 'retired')], default='draft', max_length=10)),
-                ('created_at', models.DateTimeField()),
-                ('content_hash', models.CharField(blank=True, max_length=64)),
-                ('approved_at', models.DateTimeField(null=True)),
-                ('number', models.PositiveIntegerField(unique=True)),
-                ('text', models.TextField()),
-                ('digest', models.CharField(max_length=64)),
-                ('approval', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='signing.signature')),
-                ('approved_by', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('author', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("draft", "draft"), ("approved", "approved"), ("retired", "retired")],
+                        default="draft",
+                        max_length=10,
+                    ),
+                ),
+                ("created_at", models.DateTimeField()),
+                ("content_hash", models.CharField(blank=True, max_length=64)),
+                ("approved_at", models.DateTimeField(null=True)),
+                ("number", models.PositiveIntegerField(unique=True)),
+                ("text", models.TextField()),
+                ("digest", models.CharField(max_length=64)),
+                (
+                    "approval",
+                    models.ForeignKey(
+                        null=True, on_delete=django.db.models.deletion.PROTECT, related_name="+", to="signing.signature"
+                    ),
+                ),
+                (
+                    "approved_by",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "author",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
         ),
         migrations.AddField(
-            model_name='analysis',
-            name='group_table',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to='spectra.grouptable'),
+            model_name="analysis",
+            name="group_table",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="+", to="spectra.grouptable"
+            ),
         ),
         migrations.CreateModel(
-            name='ImpurityFinding',
+            name="ImpurityFinding",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('name', models.CharField(max_length=120)),
-                ('verdict', models.CharField(max_length=30)),
-                ('estimate_fraction', models.FloatField(null=True)),
-                ('detection_limit_fraction', models.FloatField(null=True)),
-                ('analysis', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='impurity_findings', to='spectra.analysis')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("name", models.CharField(max_length=120)),
+                ("verdict", models.CharField(max_length=30)),
+                ("estimate_fraction", models.FloatField(null=True)),
+                ("detection_limit_fraction", models.FloatField(null=True)),
+                (
+                    "analysis",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="impurity_findings",
+                        to="spectra.analysis",
+                    ),
+                ),
             ],
         ),
         migrations.CreateModel(
-            name='Accessory',
+            name="Accessory",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('code', models.CharField(max_length=40)),
-                ('name', models.CharField(max_length=200)),
-                ('technique', models.CharField(choices=[('transmission', 'film or cell in transmission'), ('disc', 'disc in potassium bromide or chloride'), ('mull', 'mull'), ('atr', 'attenuated total reflection'), ('diffuse', 'diffuse reflectance'), ('gas_cell', 'gas cell')], max_length=20)),
-                ('atr_crystal_index', models.FloatField(blank=True, null=True)),
-                ('atr_angle_deg', models.FloatField(blank=True, null=True)),
-                ('atr_reflections', models.PositiveIntegerField(blank=True, null=True)),
-                ('instrument', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='accessories', to='spectra.instrument')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("code", models.CharField(max_length=40)),
+                ("name", models.CharField(max_length=200)),
+                (
+                    "technique",
+                    models.CharField(
+                        choices=[
+                            ("transmission", "film or cell in transmission"),
+                            ("disc", "disc in potassium bromide or chloride"),
+                            ("mull", "mull"),
+                            ("atr", "attenuated total reflection"),
+                            ("diffuse", "diffuse reflectance"),
+                            ("gas_cell", "gas cell"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                ("atr_crystal_index", models.FloatField(blank=True, null=True)),
+                ("atr_angle_deg", models.FloatField(blank=True, null=True)),
+                ("atr_reflections", models.PositiveIntegerField(blank=True, null=True)),
+                (
+                    "instrument",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="accessories", to="spectra.instrument"
+                    ),
+                ),
             ],
             options={
-                'verbose_name_plural': 'accessories',
+                "verbose_name_plural": "accessories",
             },
         ),
         migrations.CreateModel(
-            name='Competence',
+            name="Competence",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('activity', models.CharField(choices=[('analyse', 'analyse'), ('review', 'review')], max_length=10)),
-                ('technique', models.CharField(blank=True, choices=[('transmission', 'film or cell in transmission'), ('disc', 'disc in potassium bromide or chloride'), ('mull', 'mull'), ('atr', 'attenuated total reflection'), ('diffuse', 'diffuse reflectance'), ('gas_cell', 'gas cell')], max_length=20)),
-                ('valid_until', models.DateField()),
-                ('evidence', models.CharField(max_length=200)),
-                ('recorded_at', models.DateTimeField()),
-                ('recorded_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('user', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='competences', to=settings.AUTH_USER_MODEL)),
-                ('material', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to='spectra.material')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("activity", models.CharField(choices=[("analyse", "analyse"), ("review", "review")], max_length=10)),
+                (
+                    "technique",
+                    models.CharField(
+                        blank=True,
+                        choices=[
+                            ("transmission", "film or cell in transmission"),
+                            ("disc", "disc in potassium bromide or chloride"),
+                            ("mull", "mull"),
+                            ("atr", "attenuated total reflection"),
+                            ("diffuse", "diffuse reflectance"),
+                            ("gas_cell", "gas cell"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                ("valid_until", models.DateField()),
+                ("evidence", models.CharField(max_length=200)),
+                ("recorded_at", models.DateTimeField()),
+                (
+                    "recorded_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+                (
+                    "user",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="competences",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "material",
+                    models.ForeignKey(
+                        blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to="spectra.material"
+                    ),
+                ),
             ],
         ),
         migrations.CreateModel(
-            name='MaterialVersion',
+            name="MaterialVersion",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('draft', 'draft'), ('approved', 'approved'), ('retired', 'retired')], default='draft', max_length=10)),
-                ('created_at', models.DateTimeField()),
-                ('content_hash', models.CharField(blank=True, max_length=64)),
-                ('approved_at', models.DateTimeField(null=True)),
-                ('number', models.PositiveIntegerField()),
-                ('name', models.CharField(max_length=200)),
-                ('formula', models.CharField(blank=True, max_length=120)),
-                ('smiles', models.CharField(blank=True, max_length=1000)),
-                ('repeat_unit', models.CharField(blank=True, max_length=1000)),
-                ('composition_note', models.CharField(blank=True, max_length=300, verbose_name='hydrate, counter-ion or mixture')),
-                ('phase', models.CharField(choices=[('liquid', 'liquid'), ('solid', 'solid'), ('film', 'film'), ('solution', 'solution'), ('gas', 'gas')], max_length=10)),
-                ('expected_groups', models.JSONField(blank=True, default=list)),
-                ('forbidden_groups', models.JSONField(blank=True, default=list)),
-                ('not_separable_from', models.JSONField(blank=True, default=list)),
-                ('companion_tests', models.JSONField(blank=True, default=list)),
-                ('cautions', models.JSONField(blank=True, default=list)),
-                ('acceptance', models.TextField(blank=True)),
-                ('review_mode', models.CharField(choices=[('open', 'open: the reviewer sees the proposal at once'), ('blind', 'blind: the reviewer records an own reading first')], default='open', max_length=10)),
-                ('procedure_number', models.CharField(max_length=40)),
-                ('edited_by', models.JSONField(blank=True, default=list)),
-                ('approval', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='signing.signature')),
-                ('approved_by', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('author', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('material', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='versions', to='spectra.material')),
-            ],
-        ),
-        migrations.AddField(
-            model_name='delivery',
-            name='material_version',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='deliveries', to='spectra.materialversion'),
-        ),
-        migrations.AddField(
-            model_name='analysis',
-            name='material_version',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to='spectra.materialversion'),
-        ),
-        migrations.CreateModel(
-            name='MethodVersion',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('draft', 'draft'), ('approved', 'approved'), ('retired', 'retired')], default='draft', max_length=10)),
-                ('created_at', models.DateTimeField()),
-                ('content_hash', models.CharField(blank=True, max_length=64)),
-                ('approved_at', models.DateTimeField(null=True)),
-                ('number', models.PositiveIntegerField(unique=True)),
-                ('name', models.CharField(max_length=120)),
-                ('parameters', models.JSONField()),
-                ('digest', models.CharField(max_length=64)),
-                ('core_version', models.CharField(max_length=40)),
-                ('approval', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='signing.signature')),
-                ('approved_by', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('author', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-            ],
-        ),
-        migrations.AddField(
-            model_name='analysis',
-            name='method',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to='spectra.methodversion'),
-        ),
-        migrations.CreateModel(
-            name='Procedure',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('draft', 'draft'), ('approved', 'approved'), ('retired', 'retired')], default='draft', max_length=10)),
-                ('created_at', models.DateTimeField()),
-                ('content_hash', models.CharField(blank=True, max_length=64)),
-                ('approved_at', models.DateTimeField(null=True)),
-                ('number', models.CharField(max_length=40)),
-                ('edition', models.PositiveIntegerField()),
-                ('title', models.CharField(max_length=200)),
-                ('effective_from', models.DateField()),
-                ('technique', models.CharField(choices=[('transmission', 'film or cell in transmission'), ('disc', 'disc in potassium bromide or chloride'), ('mull', 'mull'), ('atr', 'attenuated total reflection'), ('diffuse', 'diffuse reflectance'), ('gas_cell', 'gas cell')], max_length=20)),
-                ('preparation', models.TextField(blank=True)),
-                ('accessory_text', models.CharField(blank=True, max_length=200, verbose_name='crystal, window or path')),
-                ('atr_crystal_index', models.FloatField(blank=True, null=True)),
-                ('atr_angle_deg', models.FloatField(blank=True, null=True)),
-                ('atr_reflections', models.PositiveIntegerField(blank=True, null=True)),
-                ('low_cm1', models.FloatField()),
-                ('high_cm1', models.FloatField()),
-                ('resolution_cm1', models.FloatField()),
-                ('scans', models.PositiveIntegerField(blank=True, null=True)),
-                ('repeats', models.PositiveIntegerField(default=1)),
-                ('missing_bands_allowed', models.PositiveIntegerField(default=0)),
-                ('extra_bands_allowed', models.PositiveIntegerField(default=0)),
-                ('size_order_required', models.BooleanField(default=True)),
-                ('solid_state_repeat', models.BooleanField(default=False)),
-                ('approval', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='signing.signature')),
-                ('approved_by', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('author', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('method', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, to='spectra.methodversion')),
-            ],
-        ),
-        migrations.AddField(
-            model_name='examination',
-            name='procedure',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='examinations', to='spectra.procedure'),
-        ),
-        migrations.CreateModel(
-            name='Qualification',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('performed_on', models.DateField()),
-                ('due_on', models.DateField()),
-                ('occasion', models.CharField(max_length=120)),
-                ('instrument', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='qualifications', to='spectra.instrument')),
-                ('recorded_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-            ],
-        ),
-        migrations.CreateModel(
-            name='RawFile',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('sha256', models.CharField(max_length=64, unique=True)),
-                ('size_bytes', models.PositiveBigIntegerField()),
-                ('stored_at', models.DateTimeField()),
-                ('stored_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-            ],
-        ),
-        migrations.CreateModel(
-            name='InstrumentCheck',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('performed_at', models.DateTimeField()),
-                ('valid_until', models.DateTimeField()),
-                ('verdict', models.CharField(choices=[('passed', 'passed'), ('failed', 'failed'), ('not_evaluable', 'not evaluable')], max_length=20)),
-                ('results', models.JSONField(blank=True, default=dict)),
-                ('note', models.TextField(blank=True)),
-                ('recorded_at', models.DateTimeField()),
-                ('accessory', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='checks', to='spectra.accessory')),
-                ('recorded_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('raw_file', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to='spectra.rawfile')),
-            ],
-        ),
-        migrations.CreateModel(
-            name='Reference',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('draft', 'draft'), ('approved', 'approved'), ('retired', 'retired')], default='draft', max_length=10)),
-                ('created_at', models.DateTimeField()),
-                ('content_hash', models.CharField(blank=True, max_length=64)),
-                ('approved_at', models.DateTimeField(null=True)),
-                ('code', models.CharField(max_length=40, unique=True)),
-                ('name', models.CharField(max_length=200)),
-                ('standard_lot', models.CharField(max_length=80)),
-                ('certificate', models.CharField(blank=True, max_length=120)),
-                ('standard_received_on', models.DateField(blank=True, null=True)),
-                ('standard_expires_on', models.DateField(blank=True, null=True)),
-                ('spectrum_valid_until', models.DateField(blank=True, null=True)),
-                ('technique', models.CharField(choices=[('transmission', 'film or cell in transmission'), ('disc', 'disc in potassium bromide or chloride'), ('mull', 'mull'), ('atr', 'attenuated total reflection'), ('diffuse', 'diffuse reflectance'), ('gas_cell', 'gas cell')], max_length=20)),
-                ('phase', models.CharField(choices=[('liquid', 'liquid'), ('solid', 'solid'), ('film', 'film'), ('solution', 'solution'), ('gas', 'gas')], max_length=10)),
-                ('resolution_cm1', models.FloatField(blank=True, null=True)),
-                ('atr_crystal_index', models.FloatField(blank=True, null=True)),
-                ('atr_angle_deg', models.FloatField(blank=True, null=True)),
-                ('atr_reflections', models.PositiveIntegerField(blank=True, null=True)),
-                ('file_name', models.CharField(max_length=255)),
-                ('block_index', models.PositiveIntegerField(default=0)),
-                ('answers', models.JSONField(blank=True, default=dict)),
-                ('approval', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='signing.signature')),
-                ('approved_by', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('author', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('instrument', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to='spectra.instrument')),
-                ('material', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='references', to='spectra.material')),
-                ('raw_file', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, to='spectra.rawfile')),
-                ('superseded_by', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to='spectra.reference')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("draft", "draft"), ("approved", "approved"), ("retired", "retired")],
+                        default="draft",
+                        max_length=10,
+                    ),
+                ),
+                ("created_at", models.DateTimeField()),
+                ("content_hash", models.CharField(blank=True, max_length=64)),
+                ("approved_at", models.DateTimeField(null=True)),
+                ("number", models.PositiveIntegerField()),
+                ("name", models.CharField(max_length=200)),
+                ("formula", models.CharField(blank=True, max_length=120)),
+                ("smiles", models.CharField(blank=True, max_length=1000)),
+                ("repeat_unit", models.CharField(blank=True, max_length=1000)),
+                (
+                    "composition_note",
+                    models.CharField(blank=True, max_length=300, verbose_name="hydrate, counter-ion or mixture"),
+                ),
+                (
+                    "phase",
+                    models.CharField(
+                        choices=[
+                            ("liquid", "liquid"),
+                            ("solid", "solid"),
+                            ("film", "film"),
+                            ("solution", "solution"),
+                            ("gas", "gas"),
+                        ],
+                        max_length=10,
+                    ),
+                ),
+                ("expected_groups", models.JSONField(blank=True, default=list)),
+                ("forbidden_groups", models.JSONField(blank=True, default=list)),
+                ("not_separable_from", models.JSONField(blank=True, default=list)),
+                ("companion_tests", models.JSONField(blank=True, default=list)),
+                ("cautions", models.JSONField(blank=True, default=list)),
+                ("acceptance", models.TextField(blank=True)),
+                (
+                    "review_mode",
+                    models.CharField(
+                        choices=[
+                            ("open", "open: the reviewer sees the proposal at once"),
+                            ("blind", "blind: the reviewer records an own reading first"),
+                        ],
+                        default="open",
+                        max_length=10,
+                    ),
+                ),
+                ("procedure_number", models.CharField(max_length=40)),
+                ("edited_by", models.JSONField(blank=True, default=list)),
+                (
+                    "approval",
+                    models.ForeignKey(
+                        null=True, on_delete=django.db.models.deletion.PROTECT, related_name="+", to="signing.signature"
+                    ),
+                ),
+                (
+                    "approved_by",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "author",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+                (
+                    "material",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="versions", to="spectra.material"
+                    ),
+                ),
             ],
         ),
         migrations.AddField(
-            model_name='analysis',
-            name='reference',
-            field=models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, related_name='analyses', to='spectra.reference'),
+            model_name="delivery",
+            name="material_version",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="deliveries", to="spectra.materialversion"
+            ),
+        ),
+        migrations.AddField(
+            model_name="analysis",
+            name="material_version",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="+", to="spectra.materialversion"
+            ),
         ),
         migrations.CreateModel(
-            name='ReferenceMatch',
+            name="MethodVersion",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('verdict', models.CharField(max_length=30)),
-                ('agrees', models.CharField(max_length=10)),
-                ('analysis', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='matches', to='spectra.analysis')),
-                ('reference', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to='spectra.reference')),
-            ],
-        ),
-        migrations.CreateModel(
-            name='Sample',
-            fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('code', models.CharField(max_length=20, unique=True)),
-                ('kind', models.CharField(choices=[('individual', 'individual'), ('composite', 'composite')], default='individual', max_length=12)),
-                ('form', models.CharField(blank=True, max_length=120, verbose_name='appearance on receipt')),
-                ('registered_at', models.DateTimeField()),
-                ('containers', models.ManyToManyField(related_name='samples', to='spectra.container')),
-                ('delivery', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='samples', to='spectra.delivery')),
-                ('registered_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("draft", "draft"), ("approved", "approved"), ("retired", "retired")],
+                        default="draft",
+                        max_length=10,
+                    ),
+                ),
+                ("created_at", models.DateTimeField()),
+                ("content_hash", models.CharField(blank=True, max_length=64)),
+                ("approved_at", models.DateTimeField(null=True)),
+                ("number", models.PositiveIntegerField(unique=True)),
+                ("name", models.CharField(max_length=120)),
+                ("parameters", models.JSONField()),
+                ("digest", models.CharField(max_length=64)),
+                ("core_version", models.CharField(max_length=40)),
+                (
+                    "approval",
+                    models.ForeignKey(
+                        null=True, on_delete=django.db.models.deletion.PROTECT, related_name="+", to="signing.signature"
+                    ),
+                ),
+                (
+                    "approved_by",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "author",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
         ),
         migrations.AddField(
-            model_name='examination',
-            name='samples',
-            field=models.ManyToManyField(related_name='examinations', to='spectra.sample'),
+            model_name="analysis",
+            name="method",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="+", to="spectra.methodversion"
+            ),
         ),
         migrations.CreateModel(
-            name='Spectrum',
+            name="Procedure",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('block_index', models.PositiveIntegerField(default=0)),
-                ('title', models.CharField(blank=True, max_length=300)),
-                ('role', models.CharField(choices=[('decisive', 'decisive'), ('replicate', 'replicate'), ('repeat', 'repeat'), ('background', 'background'), ('blank', 'blank'), ('excluded', 'excluded')], max_length=12)),
-                ('role_before_exclusion', models.CharField(blank=True, choices=[('decisive', 'decisive'), ('replicate', 'replicate'), ('repeat', 'repeat'), ('background', 'background'), ('blank', 'blank'), ('excluded', 'excluded')], max_length=12)),
-                ('excluded_reason', models.TextField(blank=True)),
-                ('technique', models.CharField(choices=[('transmission', 'film or cell in transmission'), ('disc', 'disc in potassium bromide or chloride'), ('mull', 'mull'), ('atr', 'attenuated total reflection'), ('diffuse', 'diffuse reflectance'), ('gas_cell', 'gas cell')], max_length=20)),
-                ('atr_crystal_index', models.FloatField(blank=True, null=True)),
-                ('atr_angle_deg', models.FloatField(blank=True, null=True)),
-                ('atr_reflections', models.PositiveIntegerField(blank=True, null=True)),
-                ('resolution_cm1', models.FloatField(blank=True, null=True)),
-                ('scans', models.PositiveIntegerField(blank=True, null=True)),
-                ('background_note', models.CharField(blank=True, max_length=200)),
-                ('already_processed', models.CharField(blank=True, max_length=300)),
-                ('measured_at_text', models.CharField(blank=True, max_length=80, verbose_name="measured at, by the instrument's clock")),
-                ('ordinate_used', models.CharField(max_length=30)),
-                ('ordinate_declared', models.CharField(blank=True, max_length=80)),
-                ('axis_unit_declared', models.CharField(blank=True, max_length=40)),
-                ('coding', models.CharField(max_length=20)),
-                ('self_checking', models.BooleanField(default=False)),
-                ('points', models.PositiveIntegerField()),
-                ('first_cm1', models.FloatField()),
-                ('last_cm1', models.FloatField()),
-                ('arrays_sha256', models.CharField(max_length=64)),
-                ('reading_findings', models.JSONField(blank=True, default=list)),
-                ('created_at', models.DateTimeField()),
-                ('accessory', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, related_name='spectra', to='spectra.accessory')),
-                ('examination', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='spectra', to='spectra.examination')),
-                ('measured_by', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('prepared_by', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("draft", "draft"), ("approved", "approved"), ("retired", "retired")],
+                        default="draft",
+                        max_length=10,
+                    ),
+                ),
+                ("created_at", models.DateTimeField()),
+                ("content_hash", models.CharField(blank=True, max_length=64)),
+                ("approved_at", models.DateTimeField(null=True)),
+                ("number", models.CharField(max_length=40)),
+                ("edition", models.PositiveIntegerField()),
+                ("title", models.CharField(max_length=200)),
+                ("effective_from", models.DateField()),
+                (
+                    "technique",
+                    models.CharField(
+                        choices=[
+                            ("transmission", "film or cell in transmission"),
+                            ("disc", "disc in potassium bromide or chloride"),
+                            ("mull", "mull"),
+                            ("atr", "attenuated total reflection"),
+                            ("diffuse", "diffuse reflectance"),
+                            ("gas_cell", "gas cell"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                ("preparation", models.TextField(blank=True)),
+                (
+                    "accessory_text",
+                    models.CharField(blank=True, max_length=200, verbose_name="crystal, window or path"),
+                ),
+                ("atr_crystal_index", models.FloatField(blank=True, null=True)),
+                ("atr_angle_deg", models.FloatField(blank=True, null=True)),
+                ("atr_reflections", models.PositiveIntegerField(blank=True, null=True)),
+                ("low_cm1", models.FloatField()),
+                ("high_cm1", models.FloatField()),
+                ("resolution_cm1", models.FloatField()),
+                ("scans", models.PositiveIntegerField(blank=True, null=True)),
+                ("repeats", models.PositiveIntegerField(default=1)),
+                ("missing_bands_allowed", models.PositiveIntegerField(default=0)),
+                ("extra_bands_allowed", models.PositiveIntegerField(default=0)),
+                ("size_order_required", models.BooleanField(default=True)),
+                ("solid_state_repeat", models.BooleanField(default=False)),
+                (
+                    "approval",
+                    models.ForeignKey(
+                        null=True, on_delete=django.db.models.deletion.PROTECT, related_name="+", to="signing.signature"
+                    ),
+                ),
+                (
+                    "approved_by",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "author",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+                ("method", models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, to="spectra.methodversion")),
+            ],
+        ),
+        migrations.AddField(
+            model_name="examination",
+            name="procedure",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="examinations", to="spectra.procedure"
+            ),
+        ),
+        migrations.CreateModel(
+            name="Qualification",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("performed_on", models.DateField()),
+                ("due_on", models.DateField()),
+                ("occasion", models.CharField(max_length=120)),
+                (
+                    "instrument",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="qualifications",
+                        to="spectra.instrument",
+                    ),
+                ),
+                (
+                    "recorded_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+            ],
+        ),
+        migrations.CreateModel(
+            name="RawFile",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("sha256", models.CharField(max_length=64, unique=True)),
+                ("size_bytes", models.PositiveBigIntegerField()),
+                ("stored_at", models.DateTimeField()),
+                (
+                    "stored_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+            ],
+        ),
+        migrations.CreateModel(
+            name="InstrumentCheck",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("performed_at", models.DateTimeField()),
+                ("valid_until", models.DateTimeField()),
+                (
+                    "verdict",
+                    models.CharField(
+                        choices=[("passed", "passed"), ("failed", "failed"), ("not_evaluable", "not evaluable")],
+                        max_length=20,
+                    ),
+                ),
+                ("results", models.JSONField(blank=True, default=dict)),
+                ("note", models.TextField(blank=True)),
+                ("recorded_at", models.DateTimeField()),
+                (
+                    "accessory",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="checks", to="spectra.accessory"
+                    ),
+                ),
+                (
+                    "recorded_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+                (
+                    "raw_file",
+                    models.ForeignKey(
+                        blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to="spectra.rawfile"
+                    ),
+                ),
+            ],
+        ),
+        migrations.CreateModel(
+            name="Reference",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("draft", "draft"), ("approved", "approved"), ("retired", "retired")],
+                        default="draft",
+                        max_length=10,
+                    ),
+                ),
+                ("created_at", models.DateTimeField()),
+                ("content_hash", models.CharField(blank=True, max_length=64)),
+                ("approved_at", models.DateTimeField(null=True)),
+                ("code", models.CharField(max_length=40, unique=True)),
+                ("name", models.CharField(max_length=200)),
+                ("standard_lot", models.CharField(max_length=80)),
+                ("certificate", models.CharField(blank=True, max_length=120)),
+                ("standard_received_on", models.DateField(blank=True, null=True)),
+                ("standard_expires_on", models.DateField(blank=True, null=True)),
+                ("spectrum_valid_until", models.DateField(blank=True, null=True)),
+                (
+                    "technique",
+                    models.CharField(
+                        choices=[
+                            ("transmission", "film or cell in transmission"),
+                            ("disc", "disc in potassium bromide or chloride"),
+                            ("mull", "mull"),
+                            ("atr", "attenuated total reflection"),
+                            ("diffuse", "diffuse reflectance"),
+                            ("gas_cell", "gas cell"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                (
+                    "phase",
+                    models.CharField(
+                        choices=[
+                            ("liquid", "liquid"),
+                            ("solid", "solid"),
+                            ("film", "film"),
+                            ("solution", "solution"),
+                            ("gas", "gas"),
+                        ],
+                        max_length=10,
+                    ),
+                ),
+                ("resolution_cm1", models.FloatField(blank=True, null=True)),
+                ("atr_crystal_index", models.FloatField(blank=True, null=True)),
+                ("atr_angle_deg", models.FloatField(blank=True, null=True)),
+                ("atr_reflections", models.PositiveIntegerField(blank=True, null=True)),
+                ("file_name", models.CharField(max_length=255)),
+                ("block_index", models.PositiveIntegerField(default=0)),
+                ("answers", models.JSONField(blank=True, default=dict)),
+                (
+                    "approval",
+                    models.ForeignKey(
+                        null=True, on_delete=django.db.models.deletion.PROTECT, related_name="+", to="signing.signature"
+                    ),
+                ),
+                (
+                    "approved_by",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "author",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+                (
+                    "instrument",
+                    models.ForeignKey(
+                        blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to="spectra.instrument"
+                    ),
+                ),
+                (
+                    "material",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="references",
+                        to="spectra.material",
+                    ),
+                ),
+                ("raw_file", models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, to="spectra.rawfile")),
+                (
+                    "superseded_by",
+                    models.ForeignKey(
+                        blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to="spectra.reference"
+                    ),
+                ),
+            ],
+        ),
+        migrations.AddField(
+            model_name="analysis",
+            name="reference",
+            field=models.ForeignKey(
+                blank=True,
+                null=True,
+                on_delete=django.db.models.deletion.PROTECT,
+                related_name="analyses",
+                to="spectra.reference",
+            ),
+        ),
+        migrations.CreateModel(
+            name="ReferenceMatch",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("verdict", models.CharField(max_length=30)),
+                ("agrees", models.CharField(max_length=10)),
+                (
+                    "analysis",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="matches", to="spectra.analysis"
+                    ),
+                ),
+                (
+                    "reference",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to="spectra.reference"
+                    ),
+                ),
+            ],
+        ),
+        migrations.CreateModel(
+            name="Sample",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("code", models.CharField(max_length=20, unique=True)),
+                (
+                    "kind",
+                    models.CharField(
+                        choices=[("individual", "individual"), ("composite", "composite")],
+                        default="individual",
+                        max_length=12,
+                    ),
+                ),
+                ("form", models.CharField(blank=True, max_length=120, verbose_name="appearance on receipt")),
+                ("registered_at", models.DateTimeField()),
+                ("containers", models.ManyToManyField(related_name="samples", to="spectra.container")),
+                (
+                    "delivery",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="samples", to="spectra.delivery"
+                    ),
+                ),
+                (
+                    "registered_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
+            ],
+        ),
+        migrations.AddField(
+            model_name="examination",
+            name="samples",
+            field=models.ManyToManyField(related_name="examinations", to="spectra.sample"),
+        ),
+        migrations.CreateModel(
+            name="Spectrum",
+            fields=[
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("block_index", models.PositiveIntegerField(default=0)),
+                ("title", models.CharField(blank=True, max_length=300)),
+                (
+                    "role",
+                    models.CharField(
+                        choices=[
+                            ("decisive", "decisive"),
+                            ("replicate", "replicate"),
+                            ("repeat", "repeat"),
+                            ("background", "background"),
+                            ("blank", "blank"),
+                            ("excluded", "excluded"),
+                        ],
+                        max_length=12,
+                    ),
+                ),
+                (
+                    "role_before_exclusion",
+                    models.CharField(
+                        blank=True,
+                        choices=[
+                            ("decisive", "decisive"),
+                            ("replicate", "replicate"),
+                            ("repeat", "repeat"),
+                            ("background", "background"),
+                            ("blank", "blank"),
+                            ("excluded", "excluded"),
+                        ],
+                        max_length=12,
+                    ),
+                ),
+                ("excluded_reason", models.TextField(blank=True)),
+                (
+                    "technique",
+                    models.CharField(
+                        choices=[
+                            ("transmission", "film or cell in transmission"),
+                            ("disc", "disc in potassium bromide or chloride"),
+                            ("mull", "mull"),
+                            ("atr", "attenuated total reflection"),
+                            ("diffuse", "diffuse reflectance"),
+                            ("gas_cell", "gas cell"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                ("atr_crystal_index", models.FloatField(blank=True, null=True)),
+                ("atr_angle_deg", models.FloatField(blank=True, null=True)),
+                ("atr_reflections", models.PositiveIntegerField(blank=True, null=True)),
+                ("resolution_cm1", models.FloatField(blank=True, null=True)),
+                ("scans", models.PositiveIntegerField(blank=True, null=True)),
+                ("background_note", models.CharField(blank=True, max_length=200)),
+                ("already_processed", models.CharField(blank=True, max_length=300)),
+                (
+                    "measured_at_text",
+                    models.CharField(blank=True, max_length=80, verbose_name="measured at, by the instrument's clock"),
+                ),
+                ("ordinate_used", models.CharField(max_length=30)),
+                ("ordinate_declared", models.CharField(blank=True, max_length=80)),
+                ("axis_unit_declared", models.CharField(blank=True, max_length=40)),
+                ("coding", models.CharField(max_length=20)),
+                ("self_checking", models.BooleanField(default=False)),
+                ("points", models.PositiveIntegerField()),
+                ("first_cm1", models.FloatField()),
+                ("last_cm1", models.FloatField()),
+                ("arrays_sha256", models.CharField(max_length=64)),
+                ("reading_findings", models.JSONField(blank=True, default=list)),
+                ("created_at", models.DateTimeField()),
+                (
+                    "accessory",
+                    models.ForeignKey(
+                        blank=True,
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="spectra",
+                        to="spectra.accessory",
+                    ),
+                ),
+                (
+                    "examination",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="spectra", to="spectra.examination"
+                    ),
+                ),
+                (
+                    "measured_by",
+                    models.ForeignKey(
+                        blank=True,
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "prepared_by",
+                    models.ForeignKey(
+                        blank=True,
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
             ],
             options={
-                'verbose_name_plural': 'spectra',
-                'ordering': ['created_at', 'pk'],
+                "verbose_name_plural": "spectra",
+                "ordering": ["created_at", "pk"],
             },
         ),
         migrations.AddField(
-            model_name='analysis',
-            name='spectrum',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='analyses', to='spectra.spectrum'),
+            model_name="analysis",
+            name="spectrum",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="analyses", to="spectra.spectrum"
+            ),
         ),
         migrations.CreateModel(
-            name='Upload',
+            name="Upload",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('file_name', models.CharField(max_length=255)),
-                ('state', models.CharField(choices=[('read', 'read'), ('needs_answer', 'needs an answer'), ('refused', 'refused'), ('attached', 'attached unread')], max_length=20)),
-                ('problem_code', models.CharField(blank=True, max_length=80)),
-                ('problem_text', models.TextField(blank=True)),
-                ('problem_line', models.PositiveIntegerField(blank=True, null=True)),
-                ('problem_remedy', models.TextField(blank=True)),
-                ('question', models.CharField(blank=True, max_length=20)),
-                ('answers', models.JSONField(blank=True, default=dict)),
-                ('facts', models.JSONField(blank=True, default=dict)),
-                ('uploaded_at', models.DateTimeField()),
-                ('compared_with_original_by', models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('examination', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='uploads', to='spectra.examination')),
-                ('raw_file', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='uploads', to='spectra.rawfile')),
-                ('uploaded_by', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("file_name", models.CharField(max_length=255)),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[
+                            ("read", "read"),
+                            ("needs_answer", "needs an answer"),
+                            ("refused", "refused"),
+                            ("attached", "attached unread"),
+                        ],
+                        max_length=20,
+                    ),
+                ),
+                ("problem_code", models.CharField(blank=True, max_length=80)),
+                ("problem_text", models.TextField(blank=True)),
+                ("problem_line", models.PositiveIntegerField(blank=True, null=True)),
+                ("problem_remedy", models.TextField(blank=True)),
+                ("question", models.CharField(blank=True, max_length=20)),
+                ("answers", models.JSONField(blank=True, default=dict)),
+                ("facts", models.JSONField(blank=True, default=dict)),
+                ("uploaded_at", models.DateTimeField()),
+                (
+                    "compared_with_original_by",
+                    models.ForeignKey(
+                        blank=True,
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "examination",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="uploads", to="spectra.examination"
+                    ),
+                ),
+                (
+                    "raw_file",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="uploads", to="spectra.rawfile"
+                    ),
+                ),
+                (
+                    "uploaded_by",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
             options={
-                'ordering': ['uploaded_at', 'pk'],
+                "ordering": ["uploaded_at", "pk"],
             },
         ),
         migrations.AddField(
-            model_name='spectrum',
-            name='upload',
-            field=models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='spectra', to='spectra.upload'),
+            model_name="spectrum",
+            name="upload",
+            field=models.ForeignKey(
+                on_delete=django.db.models.deletion.PROTECT, related_name="spectra", to="spectra.upload"
+            ),
         ),
         migrations.CreateModel(
-            name='WatchList',
+            name="WatchList",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('state', models.CharField(choices=[('draft', 'draft'), ('approved', 'approved'), ('retired', 'retired')], default='draft', max_length=10)),
-                ('created_at', models.DateTimeField()),
-                ('content_hash', models.CharField(blank=True, max_length=64)),
-                ('approved_at', models.DateTimeField(null=True)),
-                ('code', models.CharField(max_length=40)),
-                ('number', models.PositiveIntegerField()),
-                ('title', models.CharField(max_length=200)),
-                ('approval', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='signing.signature')),
-                ('approved_by', models.ForeignKey(null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
-                ('author', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='+', to=settings.AUTH_USER_MODEL)),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                (
+                    "state",
+                    models.CharField(
+                        choices=[("draft", "draft"), ("approved", "approved"), ("retired", "retired")],
+                        default="draft",
+                        max_length=10,
+                    ),
+                ),
+                ("created_at", models.DateTimeField()),
+                ("content_hash", models.CharField(blank=True, max_length=64)),
+                ("approved_at", models.DateTimeField(null=True)),
+                ("code", models.CharField(max_length=40)),
+                ("number", models.PositiveIntegerField()),
+                ("title", models.CharField(max_length=200)),
+                (
+                    "approval",
+                    models.ForeignKey(
+                        null=True, on_delete=django.db.models.deletion.PROTECT, related_name="+", to="signing.signature"
+                    ),
+                ),
+                (
+                    "approved_by",
+                    models.ForeignKey(
+                        null=True,
+                        on_delete=django.db.models.deletion.PROTECT,
+                        related_name="+",
+                        to=settings.AUTH_USER_MODEL,
+                    ),
+                ),
+                (
+                    "author",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="+", to=settings.AUTH_USER_MODEL
+                    ),
+                ),
             ],
         ),
         migrations.CreateModel(
-            name='WatchItem',
+            name="WatchItem",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('name', models.CharField(max_length=120)),
-                ('reference', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, to='spectra.reference')),
-                ('watch_list', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='items', to='spectra.watchlist')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("name", models.CharField(max_length=120)),
+                ("reference", models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, to="spectra.reference")),
+                (
+                    "watch_list",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="items", to="spectra.watchlist"
+                    ),
+                ),
             ],
         ),
         migrations.AddField(
-            model_name='materialversion',
-            name='watch_list',
-            field=models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to='spectra.watchlist'),
+            model_name="materialversion",
+            name="watch_list",
+            field=models.ForeignKey(
+                blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, to="spectra.watchlist"
+            ),
         ),
         migrations.AddField(
-            model_name='analysis',
-            name='watch_list',
-            field=models.ForeignKey(blank=True, null=True, on_delete=django.db.models.deletion.PROTECT, related_name='+', to='spectra.watchlist'),
+            model_name="analysis",
+            name="watch_list",
+            field=models.ForeignKey(
+                blank=True,
+                null=True,
+                on_delete=django.db.models.deletion.PROTECT,
+                related_name="+",
+                to="spectra.watchlist",
+            ),
         ),
         migrations.CreateModel(
-            name='Band',
+            name="Band",
             fields=[
-                ('id', models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name='ID')),
-                ('number', models.PositiveIntegerField()),
-                ('position_cm1', models.FloatField()),
-                ('height_absorbance', models.FloatField()),
-                ('snr', models.FloatField(null=True)),
-                ('kind', models.CharField(max_length=20)),
-                ('analysis', models.ForeignKey(on_delete=django.db.models.deletion.PROTECT, related_name='bands', to='spectra.analysis')),
+                ("id", models.BigAutoField(auto_created=True, primary_key=True, serialize=False, verbose_name="ID")),
+                ("number", models.PositiveIntegerField()),
+                ("position_cm1", models.FloatField()),
+                ("height_absorbance", models.FloatField()),
+                ("snr", models.FloatField(null=True)),
+                ("kind", models.CharField(max_length=20)),
+                (
+                    "analysis",
+                    models.ForeignKey(
+                        on_delete=django.db.models.deletion.PROTECT, related_name="bands", to="spectra.analysis"
+                    ),
+                ),
             ],
             options={
-                'ordering': ['number'],
-                'indexes': [models.Index(fields=['position_cm1'], name='band_position')],
+                "ordering": ["number"],
+                "indexes": [models.Index(fields=["position_cm1"], name="band_position")],
             },
         ),
         migrations.AddConstraint(
-            model_name='container',
-            constraint=models.UniqueConstraint(fields=('delivery', 'number'), name='container_number'),
+            model_name="container",
+            constraint=models.UniqueConstraint(fields=("delivery", "number"), name="container_number"),
         ),
         migrations.AddConstraint(
-            model_name='contribution',
-            constraint=models.UniqueConstraint(fields=('examination', 'user', 'kind'), name='contribution_once'),
+            model_name="contribution",
+            constraint=models.UniqueConstraint(fields=("examination", "user", "kind"), name="contribution_once"),
         ),
         migrations.AddIndex(
-            model_name='groupfinding',
-            index=models.Index(fields=['group', 'verdict'], name='group_verdict'),
+            model_name="groupfinding",
+            index=models.Index(fields=["group", "verdict"], name="group_verdict"),
         ),
         migrations.AddConstraint(
-            model_name='grouptable',
-            constraint=models.CheckConstraint(condition=models.Q(('approved_by__isnull', True), models.Q(('approved_by', models.F('author')), _negated=True), _connector='OR'), name='group_table_approved_by_another'),
+            model_name="grouptable",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    ("approved_by__isnull", True),
+                    models.Q(("approved_by", models.F("author")), _negated=True),
+                    _connector="OR",
+                ),
+                name="group_table_approved_by_another",
+            ),
         ),
         migrations.AddConstraint(
-            model_name='accessory',
-            constraint=models.UniqueConstraint(fields=('instrument', 'code'), name='accessory_code'),
+            model_name="accessory",
+            constraint=models.UniqueConstraint(fields=("instrument", "code"), name="accessory_code"),
         ),
         migrations.AddIndex(
-            model_name='delivery',
-            index=models.Index(fields=['lot'], name='delivery_lot'),
+            model_name="delivery",
+            index=models.Index(fields=["lot"], name="delivery_lot"),
         ),
         migrations.AddConstraint(
-            model_name='methodversion',
-            constraint=models.CheckConstraint(condition=models.Q(('approved_by__isnull', True), models.Q(('approved_by', models.F('author')), _negated=True), _connector='OR'), name='method_approved_by_another'),
+            model_name="methodversion",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    ("approved_by__isnull", True),
+                    models.Q(("approved_by", models.F("author")), _negated=True),
+                    _connector="OR",
+                ),
+                name="method_approved_by_another",
+            ),
         ),
         migrations.AddConstraint(
-            model_name='procedure',
-            constraint=models.UniqueConstraint(fields=('number', 'edition'), name='procedure_edition'),
+            model_name="procedure",
+            constraint=models.UniqueConstraint(fields=("number", "edition"), name="procedure_edition"),
         ),
         migrations.AddConstraint(
-            model_name='procedure',
-            constraint=models.CheckConstraint(condition=models.Q(('approved_by__isnull', True), models.Q(('approved_by', models.F('author')), _negated=True), _connector='OR'), name='procedure_approved_by_another'),
+            model_name="procedure",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    ("approved_by__isnull", True),
+                    models.Q(("approved_by", models.F("author")), _negated=True),
+                    _connector="OR",
+                ),
+                name="procedure_approved_by_another",
+            ),
         ),
         migrations.AddIndex(
-            model_name='instrumentcheck',
-            index=models.Index(fields=['accessory', '-performed_at'], name='latest_check'),
+            model_name="instrumentcheck",
+            index=models.Index(fields=["accessory", "-performed_at"], name="latest_check"),
         ),
         migrations.AddConstraint(
-            model_name='reference',
-            constraint=models.CheckConstraint(condition=models.Q(('approved_by__isnull', True), models.Q(('approved_by', models.F('author')), _negated=True), _connector='OR'), name='reference_approved_by_another'),
+            model_name="reference",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    ("approved_by__isnull", True),
+                    models.Q(("approved_by", models.F("author")), _negated=True),
+                    _connector="OR",
+                ),
+                name="reference_approved_by_another",
+            ),
         ),
         migrations.AddConstraint(
-            model_name='spectrum',
-            constraint=models.UniqueConstraint(fields=('upload', 'block_index'), name='spectrum_block_once'),
+            model_name="spectrum",
+            constraint=models.UniqueConstraint(fields=("upload", "block_index"), name="spectrum_block_once"),
         ),
         migrations.AddConstraint(
-            model_name='spectrum',
-            constraint=models.UniqueConstraint(condition=models.Q(('role', 'decisive')), fields=('examination',), name='one_decisive_spectrum'),
+            model_name="spectrum",
+            constraint=models.UniqueConstraint(
+                condition=models.Q(("role", "decisive")), fields=("examination",), name="one_decisive_spectrum"
+            ),
         ),
         migrations.AddConstraint(
-            model_name='spectrum',
-            constraint=models.CheckConstraint(condition=models.Q(models.Q(('role', 'excluded'), _negated=True), models.Q(('excluded_reason', ''), _negated=True), _connector='OR'), name='exclusion_has_a_reason'),
+            model_name="spectrum",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    models.Q(("role", "excluded"), _negated=True),
+                    models.Q(("excluded_reason", ""), _negated=True),
+                    _connector="OR",
+                ),
+                name="exclusion_has_a_reason",
+            ),
         ),
         migrations.AddConstraint(
-            model_name='watchlist',
-            constraint=models.UniqueConstraint(fields=('code', 'number'), name='watch_list_version'),
+            model_name="watchlist",
+            constraint=models.UniqueConstraint(fields=("code", "number"), name="watch_list_version"),
         ),
         migrations.AddConstraint(
-            model_name='watchlist',
-            constraint=models.CheckConstraint(condition=models.Q(('approved_by__isnull', True), models.Q(('approved_by', models.F('author')), _negated=True), _connector='OR'), name='watch_list_approved_by_another'),
+            model_name="watchlist",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    ("approved_by__isnull", True),
+                    models.Q(("approved_by", models.F("author")), _negated=True),
+                    _connector="OR",
+                ),
+                name="watch_list_approved_by_another",
+            ),
         ),
         migrations.AddConstraint(
-            model_name='watchitem',
-            constraint=models.UniqueConstraint(fields=('watch_list', 'name'), name='watch_item_once'),
+            model_name="watchitem",
+            constraint=models.UniqueConstraint(fields=("watch_list", "name"), name="watch_item_once"),
         ),
         migrations.AddConstraint(
-            model_name='materialversion',
-            constraint=models.UniqueConstraint(fields=('material', 'number'), name='material_version_number'),
+            model_name="materialversion",
+            constraint=models.UniqueConstraint(fields=("material", "number"), name="material_version_number"),
         ),
         migrations.AddConstraint(
-            model_name='materialversion',
-            constraint=models.UniqueConstraint(condition=models.Q(('state', 'approved')), fields=('material',), name='one_approved_version_of_a_material'),
+            model_name="materialversion",
+            constraint=models.UniqueConstraint(
+                condition=models.Q(("state", "approved")),
+                fields=("material",),
+                name="one_approved_version_of_a_material",
+            ),
         ),
         migrations.AddConstraint(
-            model_name='materialversion',
-            constraint=models.CheckConstraint(condition=models.Q(('approved_by__isnull', True), models.Q(('approved_by', models.F('author')), _negated=True), _connector='OR'), name='material_approved_by_another'),
+            model_name="materialversion",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    ("approved_by__isnull", True),
+                    models.Q(("approved_by", models.F("author")), _negated=True),
+                    _connector="OR",
+                ),
+                name="material_approved_by_another",
+            ),
         ),
         migrations.AddIndex(
-            model_name='analysis',
-            index=models.Index(fields=['state', 'queued_at'], name='analysis_queue'),
+            model_name="analysis",
+            index=models.Index(fields=["state", "queued_at"], name="analysis_queue"),
         ),
         migrations.AddConstraint(
-            model_name='analysis',
-            constraint=models.CheckConstraint(condition=models.Q(models.Q(('state', 'done'), _negated=True), models.Q(('result__isnull', False), models.Q(('result_digest', ''), _negated=True)), _connector='OR'), name='done_has_a_result'),
+            model_name="analysis",
+            constraint=models.CheckConstraint(
+                condition=models.Q(
+                    models.Q(("state", "done"), _negated=True),
+                    models.Q(("result__isnull", False), models.Q(("result_digest", ""), _negated=True)),
+                    _connector="OR",
+                ),
+                name="done_has_a_result",
+            ),
         ),
     ]

@@ -64,6 +64,16 @@ def check_structure(smiles: str, *, field: str = "smiles") -> None:
         raise BadInput(error.problem.code, error.problem.message, remedy=error.problem.remedy, field=field) from None
 
 
+def _judge_chemistry(values: Mapping[str, object]) -> None:
+    """Structures that can be read, and groups that the program knows: an analysis must not find out later."""
+    check_structure(str(values.get("smiles", "")))
+    check_structure(str(values.get("repeat_unit", "")), field="repeat_unit")
+    for field in ("expected_groups", "forbidden_groups"):
+        unknown = sorted(set(values.get(field) or ()) - set(group_table.GROUP_IDS) - set(group_table.CLASS_IDS))
+        if unknown:
+            raise BadInput("material.unknown_group", "No group is called " + ", ".join(unknown) + ".", field=field)
+
+
 def draft_material(*, by: User, code: str, values: Mapping[str, object]) -> MaterialVersion:
     """A new draft version of a material; the material itself is made with its first version."""
     permissions.require_method_owner(by)
@@ -73,8 +83,7 @@ def draft_material(*, by: User, code: str, values: Mapping[str, object]) -> Mate
     _only(values, MATERIAL_FIELDS)
     if not str(values.get("name", "")).strip():
         raise BadInput("material.no_name", "Give the declared name.", field="name")
-    check_structure(str(values.get("smiles", "")))
-    check_structure(str(values.get("repeat_unit", "")), field="repeat_unit")
+    _judge_chemistry(values)
     with unit_of_work():
         material, _ = Material.objects.get_or_create(code=code, defaults={"created_at": timezone.now()})
         material = Material.objects.select_for_update().get(pk=material.pk)
@@ -98,8 +107,7 @@ def change_material(*, pk: int, by: User, values: Mapping[str, object], reason: 
     """Change a draft. Old and new values go into the trail."""
     permissions.require_method_owner(by)
     _only(values, MATERIAL_FIELDS)
-    check_structure(str(values.get("smiles", "")))
-    check_structure(str(values.get("repeat_unit", "")), field="repeat_unit")
+    _judge_chemistry(values)
     with unit_of_work():
         version = MaterialVersion.objects.select_for_update().filter(pk=pk).first()
         if version is None:

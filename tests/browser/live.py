@@ -14,6 +14,8 @@ import urllib.request
 from collections.abc import Callable
 from pathlib import Path
 
+from labsite.supervisor import die_with_parent
+
 ROOT = Path(__file__).resolve().parent.parent.parent
 READY_S = 60
 STOP_S = 20
@@ -40,7 +42,12 @@ class LiveLaboratory:
         self.log = open(self.folder / "start.log", "wb")  # noqa: SIM115 - closed by stop()
         self.process = subprocess.Popen(
             [sys.executable, str(ROOT / "manage.py"), "start", "--own", "--port", str(self.port)],
-            cwd=ROOT, env=self.environment, stdin=subprocess.DEVNULL, stdout=self.log, stderr=subprocess.STDOUT,
+            cwd=ROOT,
+            env=self.environment,
+            stdin=subprocess.DEVNULL,
+            stdout=self.log,
+            stderr=subprocess.STDOUT,
+            preexec_fn=die_with_parent(),
         )
         try:
             wait_until(self._answers, READY_S, "the web server answers")

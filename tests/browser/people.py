@@ -20,7 +20,9 @@ INK = """() => {
   let ink = 0;
   canvases.filter((canvas) => canvas.width && canvas.height).forEach((canvas) => {
     const { data } = canvas.getContext("2d").getImageData(0, 0, canvas.width, canvas.height);
-    for (let i = 0; i < data.length; i += 4) if (data[i + 3] > 40 && data[i] + data[i + 1] + data[i + 2] < 600) ink += 1;
+    for (let i = 0; i < data.length; i += 4) {
+      if (data[i + 3] > 40 && data[i] + data[i + 1] + data[i + 2] < 600) ink += 1;
+    }
   });
   return ink;
 }"""

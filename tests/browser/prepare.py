@@ -50,8 +50,13 @@ def main() -> None:
     material = builders.approved(
         "material",
         builders.draft_material(
-            cast, code="IPA", name="2-Propanol", formula="C3H8O", smiles="CC(C)O",
-            expected_groups=["alcohol_oh", "alkane_ch"], cautions=["Water below one per cent is not seen by this test."],
+            cast,
+            code="IPA",
+            name="2-Propanol",
+            formula="C3H8O",
+            smiles="CC(C)O",
+            expected_groups=["alcohol_oh", "alkane_ch"],
+            cautions=["Water below one per cent is not seen by this test."],
         ),
         cast,
     )

@@ -8,43 +8,22 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
 from dataclasses import dataclass, field
 from html.parser import HTMLParser
-from types import SimpleNamespace
 
 import pytest
-from django.db import connection, transaction
+from django.db import connection
 from django.http import HttpResponse
-from django.test import Client
 from django.urls import URLPattern, URLResolver, get_resolver, reverse
+from django.utils.html import escape
 
 from labsite import policy
-from labsite.accounts.models import Role, User
-from labsite.accounts.services import deactivate
 from reviews.models import InterpretationVersion
-from reviews.services import reviewing
-from spectra import computing
-from spectra.core.errors import CoreError
-from spectra.services import analyses, approvals, master
-from tests import builders
-from tests.builders import Laboratory
-from tests.cast import PASSWORD, Cast, make_cast, make_person, sign_in
+from tests.cast import PASSWORD
+from tests.project.world import HOSTILE, INSIDERS, PEOPLE, World, build_world, rolled_back
 
-PEOPLE = ("visitor", "outsider", "analyst", "reviewer", "qa_manager", "method_owner", "administrator")
-INSIDERS = ("manifold", "administrator")  # between them they may do everything
 METHODS = ("GET", "POST", "PUT", "PATCH", "DELETE")
 pytestmark = pytest.mark.django_db  # the databases are made; the laboratory below lives longer than one test
-
-
-@dataclass(frozen=True)
-class World:
-    """One laboratory with one record in every state that an address can meet."""
-
-    cast: Cast
-    lab: Laboratory
-    manifold: User  # analyst, reviewer, QA manager and method owner at once
-    id: SimpleNamespace  # primary keys and hashes by name
 
 
 @dataclass(frozen=True)
@@ -109,19 +88,27 @@ LINES: tuple[Line, ...] = (
     get("accounts:people", "302 404 403 403 403 403 200"),
     get("accounts:new_person", "302 404 403 403 403 403 200"),
     post(
-        "accounts:new_person", "302 404 403 403 403 403 200", "",
+        "accounts:new_person",
+        "302 404 403 403 403 403 200",
+        "",
         lambda world: {"username": "newcomer", "printed_name": "Newcomer", "roles": ["analyst"]},
     ),
     get("accounts:small_laboratory", "302 404 403 403 200 403 200"),
     post("accounts:small_laboratory", "302 404 403 403 302 403 403", "", reason),
     get("accounts:person", "302 404 403 403 403 403 200", user_id="second_analyst"),
     post(
-        "accounts:grant_role", "302 404 403 403 403 403 302", "",
-        lambda world: {"role": "reviewer", "reason": "as agreed"}, user_id="second_analyst",
+        "accounts:grant_role",
+        "302 404 403 403 403 403 302",
+        "",
+        lambda world: {"role": "reviewer", "reason": "as agreed"},
+        user_id="second_analyst",
     ),
     post(
-        "accounts:revoke_role", "302 404 403 403 403 403 302", "",
-        lambda world: {"role": "analyst", "reason": "as agreed"}, user_id="second_analyst",
+        "accounts:revoke_role",
+        "302 404 403 403 403 403 302",
+        "",
+        lambda world: {"role": "analyst", "reason": "as agreed"},
+        user_id="second_analyst",
     ),
     post("accounts:deactivate", "302 404 403 403 403 403 302", "", reason, user_id="second_analyst"),
     post("accounts:reactivate", "302 404 403 403 403 403 302", "", reason, user_id="former"),
@@ -186,8 +173,12 @@ LINES: tuple[Line, ...] = (
     post("spectra:new_check", "302 404 422 403 403 422 403", "nothing typed", pk="accessory"),
     get("spectra:approve", "302 404 403 403 200 200 403", kind="material_kind", pk="draft_material"),
     post(
-        "spectra:approve", "302 404 403 403 302 403 403", "the owner wrote it",
-        signature(of="draft_material_hash"), kind="material_kind", pk="draft_material",
+        "spectra:approve",
+        "302 404 403 403 302 403 403",
+        "the owner wrote it",
+        signature(of="draft_material_hash"),
+        kind="material_kind",
+        pk="draft_material",
     ),
     # Deliveries, samples, files
     get("reviews:samples", "302 404 200 200 200 200 403"),
@@ -198,13 +189,19 @@ LINES: tuple[Line, ...] = (
     post("reviews:register_delivery", "302 404 422 403 403 403 403", "nothing typed"),
     post("reviews:upload", "302 404 422 403 403 403 403", "no file", pk="examination"),
     post(
-        "reviews:answer_upload", "302 404 302 403 403 403 403", "",
-        lambda world: {"x_unit": "cm-1", "ordinate": "absorbance"}, pk="asking_upload",
+        "reviews:answer_upload",
+        "302 404 302 403 403 403 403",
+        "",
+        lambda world: {"x_unit": "cm-1", "ordinate": "absorbance"},
+        pk="asking_upload",
     ),
     get("reviews:spectrum_row", "302 404 200 200 200 200 403", pk="draft_spectrum"),
     post(
-        "reviews:change_role", "302 404 302 403 403 403 403", "",
-        lambda world: {"role": "excluded", "reason": "a wet cell"}, pk="draft_spectrum",
+        "reviews:change_role",
+        "302 404 302 403 403 403 403",
+        "",
+        lambda world: {"role": "excluded", "reason": "a wet cell"},
+        pk="draft_spectrum",
     ),
     post("reviews:retry", "302 404 302 403 403 403 403", pk="failed_analysis"),
     post("reviews:retry", "302 404 409 403 403 403 403", "did not fail", pk="draft_analysis"),
@@ -217,7 +214,9 @@ LINES: tuple[Line, ...] = (
     get("reviews:plot", "302 404 409 409 409 409 403", "not analysed", pk="waiting_analysis"),
     get("reviews:version", "302 404 302 302 302 302 403", pk="draft"),
     post(
-        "reviews:add_claim", "302 404 302 403 403 403 403", "",
+        "reviews:add_claim",
+        "302 404 302 403 403 403 403",
+        "",
         lambda world: {"kind": "quality", "verdict": "quality:usable", "title": "Thin film", "reason": "as asked"},
         pk="draft",
     ),
@@ -226,15 +225,21 @@ LINES: tuple[Line, ...] = (
     post("reviews:confirm_claim", "302 404 302 403 403 403 403", pk="draft", claim_pk="draft_claim"),
     post("reviews:confirm_claim", "302 404 409 403 403 403 403", "signed", pk="submitted", claim_pk="submitted_claim"),
     post(
-        "reviews:change_claim", "302 404 302 403 403 403 403", "",
+        "reviews:change_claim",
+        "302 404 302 403 403 403 403",
+        "",
         lambda world: {"verdict": world.id.changed_verdict, "reason": "seen otherwise"},
-        pk="draft", claim_pk="draft_claim",
+        pk="draft",
+        claim_pk="draft_claim",
     ),
     post("reviews:change_claim", "302 404 422 403 403 403 403", "no reason", pk="draft", claim_pk="draft_claim"),
     post("reviews:remove_claim", "302 404 409 403 403 403 403", "computed", pk="draft", claim_pk="draft_claim"),
     post(
-        "reviews:write_conclusion", "302 404 302 403 403 403 403", "",
-        lambda world: {"value": "complies", "text": ""}, pk="draft",
+        "reviews:write_conclusion",
+        "302 404 302 403 403 403 403",
+        "",
+        lambda world: {"value": "complies", "text": ""},
+        pk="draft",
     ),
     post("reviews:write_conclusion", "302 404 422 403 403 403 403", "nothing typed", pk="draft"),
     get("reviews:submit", "302 404 200 403 403 403 403", pk="ready"),
@@ -248,43 +253,51 @@ LINES: tuple[Line, ...] = (
     post("reviews:hand_back", "302 404 403 302 403 403 403", pk="taken"),
     post("reviews:open_point", "302 404 403 302 403 403 403", pk="taken", point_pk="taken_point"),
     post(
-        "reviews:judge_point", "302 404 403 302 403 403 403", "",
-        lambda world: {"judgement": "agree", "note": "seen"}, pk="taken", point_pk="opened_point",
+        "reviews:judge_point",
+        "302 404 403 302 403 403 403",
+        "",
+        lambda world: {"judgement": "agree", "note": "seen"},
+        pk="taken",
+        point_pk="opened_point",
     ),
     post(
-        "reviews:answer_point", "302 404 302 403 403 403 403", "",
-        lambda world: {"answer": "measured again"}, pk="disputed", point_pk="disputed_point",
+        "reviews:answer_point",
+        "302 404 302 403 403 403 403",
+        "",
+        lambda world: {"answer": "measured again"},
+        pk="disputed",
+        point_pk="disputed_point",
     ),
     post(
-        "reviews:settle_point", "302 404 403 302 403 403 403", "",
-        lambda world: {"settlement": "agreed now"}, pk="answered", point_pk="answered_point",
+        "reviews:settle_point",
+        "302 404 403 302 403 403 403",
+        "",
+        lambda world: {"settlement": "agreed now"},
+        pk="answered",
+        point_pk="answered_point",
     ),
     post("reviews:approve", "302 404 403 302 403 403 403", "", signature("approve", "seen_hash"), pk="seen"),
+    post(
+        "reviews:approve", "302 404 403 409 403 403 403", "another hash", signature("approve", "taken_hash"), pk="seen"
+    ),
     post("reviews:approve", "302 404 403 409 403 403 403", "unread", signature("approve", "taken_hash"), pk="taken"),
     post(
-        "reviews:reject", "302 404 403 302 403 403 403", "",
-        signature("reject", "taken_hash", general="measure again"), pk="taken",
+        "reviews:reject",
+        "302 404 403 302 403 403 403",
+        "",
+        signature("reject", "taken_hash", general="measure again"),
+        pk="taken",
     ),
     post("reviews:reject", "302 404 403 422 403 403 403", "no reason", signature("reject", "taken_hash"), pk="taken"),
     post(
-        "reviews:withdraw", "302 404 403 403 302 403 403", "",
-        signature("withdraw", "approved_hash", reason="the lot was mixed up"), pk="approved",
+        "reviews:withdraw",
+        "302 404 403 403 302 403 403",
+        "",
+        signature("withdraw", "approved_hash", reason="the lot was mixed up"),
+        pk="approved",
     ),
     post("reviews:revise", "302 404 302 403 403 403 403", "rejected", pk="rejected"),
 )
-
-
-# The laboratory in which everything is asked
-
-
-@contextmanager
-def rolled_back() -> Iterator[None]:
-    """A transaction that leaves nothing behind; services may open their durable one inside it, as in any test."""
-    block = transaction.atomic()
-    block._from_testcase = True
-    with block:
-        yield
-        transaction.set_rollback(True)
 
 
 @pytest.fixture(scope="module")
@@ -293,130 +306,13 @@ def world(django_db_setup, django_db_blocker) -> Iterator[World]:
         yield build_world()
 
 
-def build_world() -> World:
-    cast = make_cast()
-    manifold = make_person(
-        "manifold", "Manifold", (Role.ANALYST, Role.REVIEWER, Role.QA_MANAGER, Role.METHOD_OWNER)
-    )
-    former = make_person("former", "Former analyst", (Role.ANALYST,))
-    deactivate(by=cast.administrator, user_id=former.pk, reason="left")
-    lab = builders.laboratory(cast)
-    watched = builders.register_reference(cast, None, code="R-2", seed=91)
-    builders.approved("reference", watched, cast)
-    watch_list = master.draft_watch_list(
-        by=cast.method_owner, code="W-1", title="Likely contaminants", items=[("Other ester", watched.pk)]
-    )
-    draft_material = builders.draft_material(cast, code="BAC", name="Butyl acetate", smiles="CCCCOC(C)=O")
-
-    waiting = builders.waiting_analysis(cast, lab)
-    asking = builders.upload(
-        builders.examination(cast, lab, lot="L-2"), cast.analyst, data=builders.table_file(), file_name="table.txt"
-    )
-    failed = builders.waiting_analysis(cast, lab)
-    draft = builders.drafted_version(cast, lab, lot="L-3")  # one real computation, for the plot
-    with pytest.MonkeyPatch.context() as patch:
-        patch.setattr(computing, "compute", lambda analysis, *, progress: refuse())
-        analyses.execute(analysis_id=failed.pk)
-        patch.setattr(computing, "compute", lambda analysis, *, progress: builders.fake_outcome())
-        ready = builders.drafted_version(cast, lab, lot="L-4")
-        builders.confirm_all(ready, cast.analyst)
-        builders.conclude(ready, cast.analyst)
-        submitted = builders.submitted_version(cast, lab, lot="L-5")
-        taken = builders.taken_version(cast, lab, lot="L-6")
-        seen = builders.taken_version(cast, lab, lot="L-7")
-        builders.see_everything(seen, cast.reviewer)
-        disputed = dispute(builders.taken_version(cast, lab, lot="L-8"), cast)
-        answered = dispute(builders.taken_version(cast, lab, lot="L-9"), cast, answer="The film was thin.")
-        approved = builders.approved_version(cast, lab, lot="L-10")
-        rejected = builders.rejected_version(cast, lab, lot="L-11")
-    open_first(taken, cast)
-
-    draft_claim = draft.claims.filter(kind="group", status="proposed").first()
-    examination = draft.interpretation.examination
-    points = list(taken.points.order_by("pk"))
-    return World(
-        cast,
-        lab,
-        manifold,
-        SimpleNamespace(
-            second_analyst=cast.second_analyst.pk,
-            former=former.pk,
-            entry=1,
-            delivery_kind="delivery",
-            delivery=examination.delivery_id,
-            sample=examination.samples.get().pk,
-            examination=waiting.spectrum.examination_id,
-            asking_upload=asking.pk,
-            reference=lab.reference.pk,
-            raw=draft.analysis.spectrum.upload.raw_file.sha256,
-            material=lab.material.pk,
-            material_kind="material",
-            draft_material=draft_material.pk,
-            draft_material_hash=approvals.content_hash_of(type(draft_material).objects.get(pk=draft_material.pk)),
-            watch_list=watch_list.pk,
-            procedure=lab.procedure.pk,
-            method=lab.method.pk,
-            group_table=lab.table.pk,
-            instrument=lab.instrument.pk,
-            accessory=lab.instrument.accessories.get().pk,
-            waiting_analysis=waiting.pk,
-            waiting_spectrum=waiting.spectrum_id,
-            failed_analysis=failed.pk,
-            draft=draft.pk,
-            draft_analysis=draft.analysis_id,
-            draft_spectrum=draft.analysis.spectrum_id,
-            draft_claim=draft_claim.pk,
-            changed_verdict="undecided" if draft_claim.verdict != "undecided" else "supported",
-            ready=ready.pk,
-            ready_hash=builders.hash_to_sign(ready),
-            submitted=submitted.pk,
-            submitted_claim=submitted.claims.first().pk,
-            taken=taken.pk,
-            taken_hash=taken.content_hash,
-            opened_point=points[0].pk,
-            taken_point=points[-1].pk,
-            seen=seen.pk,
-            seen_hash=seen.content_hash,
-            disputed=disputed.pk,
-            disputed_point=disputed.points.order_by("pk").first().pk,
-            answered=answered.pk,
-            answered_point=answered.points.order_by("pk").first().pk,
-            approved=approved.pk,
-            approved_hash=approved.content_hash,
-            approved_spectrum=approved.analysis.spectrum_id,
-            rejected=rejected.pk,
-        ),
-    )
-
-
-def refuse() -> None:
-    raise CoreError("spectrum.empty", "There is nothing to analyse.")
-
-
-def open_first(version, cast):
-    point = version.points.order_by("pk").first()
-    reviewing.open_point(version_id=version.pk, point_id=point.pk, by=cast.reviewer)
-    return point
-
-
-def dispute(version, cast, *, answer: str = ""):
-    """The reviewer disagrees about the first point, and the analyst answers where `answer` is given."""
-    here = {"version_id": version.pk, "point_id": open_first(version, cast).pk}
-    reviewing.judge_point(**here, by=cast.reviewer, judgement="disagree", comment="I see it otherwise.")
-    if answer:
-        reviewing.answer_disagreement(**here, by=cast.analyst, answer=answer)
-    return version
-
-
-def client_of(world: World, person: str, **options: object) -> Client:
-    client = Client(raise_request_exception=False, **options)
-    if person != "visitor":
-        sign_in(client, world.manifold if person == "manifold" else world.cast[person])
-    return client
-
-
 def address(world: World, line: Line) -> str:
     return reverse(line.name, kwargs={name: getattr(world.id, key) for name, key in line.kwargs.items()})
+
+
+def ask(world: World, person: str, line: Line, url: str = "") -> HttpResponse:
+    client, url = world.as_person(person), url or address(world, line)
+    return client.get(url) if line.method == "GET" else client.post(url, line.data(world))
 
 
 # What each answer must keep
@@ -491,9 +387,7 @@ def test_each_role_gets_the_answer_that_the_table_says(world, line):
     found, wrong = {}, []
     for person in PEOPLE:
         with rolled_back():
-            client = client_of(world, person)
-            response = client.generic if line.method not in ("GET", "POST") else getattr(client, line.method.lower())
-            response = response(address(world, line), line.data(world) if line.method == "POST" else {})
+            response = ask(world, person, line)
             found[person] = response.status_code
             wrong += [f"{person}: {what}" for what in wrong_with(response)]
             if response.streaming:
@@ -511,7 +405,7 @@ def test_other_methods_are_refused_and_break_nothing(world, name):
             if method in taken:
                 continue
             with rolled_back():
-                response = client_of(world, person).generic(method, address(world, lines[0]))
+                response = world.as_person(person).generic(method, address(world, lines[0]))
                 assert response.status_code in (403, 405), f"{method} by {person}: {response.status_code}"
                 assert not wrong_with(response)
 
@@ -521,7 +415,7 @@ def test_a_post_from_another_site_is_refused(world, line):
     """Without the token of the form nothing is done, whoever is signed in."""
     for person in INSIDERS:
         with rolled_back():
-            response = client_of(world, person, enforce_csrf_checks=True).post(address(world, line), line.data(world))
+            response = world.as_person(person, checks_forms=True).post(address(world, line), line.data(world))
             assert response.status_code == 403, person
             assert not wrong_with(response)
 
@@ -536,8 +430,7 @@ def test_a_record_that_is_not_there_is_not_found(world, line):
         url = reverse(line.name, kwargs={name: unknown.get(name, number) for name in line.kwargs})
         for person in INSIDERS:
             with rolled_back():
-                client = client_of(world, person)
-                response = client.get(url) if line.method == "GET" else client.post(url, line.data(world))
+                response = ask(world, person, line, url)
                 assert response.status_code in (403, 404, 422), f"{number} by {person}: {response.status_code}"
                 assert not wrong_with(response)
 
@@ -545,10 +438,33 @@ def test_a_record_that_is_not_there_is_not_found(world, line):
 def test_an_address_that_does_not_exist_is_a_page_of_ours(world):
     for person in PEOPLE:
         with rolled_back():
-            response = client_of(world, person).get("/no/such/page/")
+            response = world.as_person(person).get("/no/such/page/")
             assert response.status_code == 404
             assert not wrong_with(response)
             assert b"There is no such page." in response.content
+
+
+SIGNED_PAGES = [  # address, who signs there, how many signatures can be given
+    ("reviews:submit", "ready", "analyst", 1),
+    ("reviews:review", "seen", "reviewer", 2),
+    ("reviews:review", "taken", "reviewer", 1),
+    ("reviews:review", "approved", "qa_manager", 1),
+]
+
+
+@pytest.mark.parametrize(("name", "record", "person", "count"), SIGNED_PAGES)
+def test_a_page_that_asks_for_a_signature_sends_the_hash_that_it_shows(world, name, record, person, count):
+    with rolled_back():
+        response = world.as_person(person).get(reverse(name, args=[getattr(world.id, record)]))
+    sent = re.findall(r'name="(?:[a-z]+-)?content_hash" value="([0-9a-f]{64})"', response.content.decode("utf-8"))
+    assert sent == [getattr(world.id, f"{record}_hash")] * count
+
+
+def test_the_approval_of_master_data_sends_the_hash_that_it_shows(world):
+    with rolled_back():
+        url = reverse("spectra:approve", args=["material", world.id.draft_material])
+        response = world.as_person("qa_manager").get(url)
+    assert f'name="content_hash" value="{world.id.draft_material_hash}"' in response.content.decode("utf-8")
 
 
 @pytest.mark.parametrize(
@@ -557,10 +473,19 @@ def test_an_address_that_does_not_exist_is_a_page_of_ours(world):
 def test_a_program_that_asks_for_json_gets_refusals_in_one_shape(world, name):
     line = next(line for line in LINES if line.name == name)
     with rolled_back():
-        client = client_of(world, "outsider")
+        client = world.as_person("outsider")
         answer = client.get(address(world, line), headers={"accept": "application/json"})
     assert answer.status_code == 404
     assert set(answer.json()["error"]) == {"code", "message", "remedy", "params", "request"}
+
+
+@pytest.mark.parametrize(("name", "key"), [("reviews:sample", "sample"), ("reviews:bench", "draft_spectrum")])
+def test_text_from_a_form_or_file_is_shown_as_text(world, name, key):
+    """The laboratory holds text that would be markup; every test above would have found it unescaped."""
+    with rolled_back():
+        page = world.as_person("analyst").get(reverse(name, args=[getattr(world.id, key)])).content.decode("utf-8")
+    assert escape(HOSTILE) in page
+    assert HOSTILE not in page
 
 
 def test_the_database_was_left_as_it_was(world):

@@ -11,13 +11,9 @@ from django.conf import settings
 ROOT = Path(settings.BASE_DIR)
 APPS = ("labsite", "spectra", "reviews")
 TEMPLATES = sorted(path for app in APPS for path in (ROOT / app).rglob("templates/**/*.html"))
-STATIC = sorted(
-    path for path in (ROOT / "labsite" / "static").rglob("*") if path.suffix in (".js", ".css", ".svg")
-)
+STATIC = sorted(path for path in (ROOT / "labsite" / "static").rglob("*") if path.suffix in (".js", ".css", ".svg"))
 OWN_SCRIPTS = [path for path in STATIC if path.suffix == ".js" and "vendor" not in path.parts]
-PYTHON = sorted(
-    path for app in APPS for path in (ROOT / app).rglob("*.py") if "migrations" not in path.parts
-)
+PYTHON = sorted(path for app in APPS for path in (ROOT / app).rglob("*.py") if "migrations" not in path.parts)
 
 COMMENT = re.compile(r"\{% comment %\}.*?\{% endcomment %\}|\{#.*?#\}", re.DOTALL)
 INLINE = {

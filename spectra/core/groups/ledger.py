@@ -454,6 +454,7 @@ def _class_claim(
         () if verdict in ("supported", "contradicted") else would,
         None,
         "Wider class.",
+        members,
     )
 
 
