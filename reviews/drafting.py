@@ -37,7 +37,13 @@ def draft_claims(result: Mapping[str, object]) -> list[DraftClaim]:
 
 
 def _quality(result: Mapping) -> DraftClaim:
-    findings = [finding for finding in result.get("findings", ()) if finding["severity"] != "info"]
+    findings = [
+        finding
+        for finding in result.get("findings", ())
+        # A remark on how the file declares itself stands beside the file; it limits the reading only when serious.
+        if finding["severity"] == "serious"
+        or (finding["severity"] == "warning" and not finding["code"].startswith("reader."))
+    ]
     serious = [finding for finding in findings if finding["severity"] == "serious"]
     verdict = "not_usable" if serious else "limits_reading" if findings else "usable"
     text = " ".join(finding["message"] for finding in findings) or "Nothing in the measurement limits the reading."

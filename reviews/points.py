@@ -40,6 +40,7 @@ class Surroundings:
     reference: str = ""  # the reference is missing, expired or of another technique
     excluded: tuple[str, ...] = ()  # excluded spectra with their reasons
     departures: tuple[str, ...] = ()  # departures from the written procedure
+    same_file: str = ""  # the same bytes stand for another sample too
     reruns: tuple[str, ...] = ()
     earlier: str = ""  # what changed since the version before
 
@@ -75,6 +76,8 @@ def must_see_points(
         points.append(
             DraftPoint("departures", "procedure", "Departures from the procedure", " ".join(around.departures))
         )
+    if around.same_file:
+        points.append(DraftPoint("same_file", "same_file", "The same file as another sample", around.same_file))
     for number, text in enumerate(around.excluded, start=1):
         points.append(DraftPoint(f"excluded:{number}", "excluded", "Excluded spectrum", text))
     for number, text in enumerate(around.reruns, start=1):

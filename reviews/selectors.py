@@ -114,6 +114,15 @@ def _region(claim: Claim) -> tuple[float, float] | None:
     return (position - 30.0, position + 30.0) if position is not None else None
 
 
+def same_file_sentence(spectrum: Spectrum) -> str:
+    """Where else the very same bytes were brought in; empty when nowhere."""
+    others = spectra_selectors.same_bytes_elsewhere(spectrum)
+    if not others:
+        return ""
+    names = ", ".join(sorted(sample.code for other in others for sample in other.samples.all()))
+    return f"The same file, byte for byte, was also brought in for {names}: one measurement cannot show two samples."
+
+
 def surroundings(version: InterpretationVersion) -> Surroundings:
     """The facts around a proposal that a reviewer has to see, each in a sentence."""
     row = version.interpretation.examination
@@ -128,6 +137,7 @@ def surroundings(version: InterpretationVersion) -> Surroundings:
             if s.role == SpectrumRole.EXCLUDED
         ),
         departures=tuple(departures(row, spectrum)),
+        same_file=same_file_sentence(spectrum),
         reruns=tuple(
             f"{s.upload.file_name} was measured as {s.get_role_display()} beside the decisive spectrum."
             for s in spectra
@@ -327,11 +337,13 @@ def disagreements_to_answer(*, limit: int = 100) -> list[ReviewRead]:
     )
 
 
-def rejected_unrevised(*, limit: int = 100) -> list[InterpretationVersion]:
-    """Rejected versions that nobody has revised yet."""
+def sent_back(*, limit: int = 100) -> list[InterpretationVersion]:
+    """Rejected and withdrawn versions that nobody has revised yet."""
     rows = (
-        InterpretationVersion.objects.filter(state=str(State.REJECTED), revisions__isnull=True)
-        .select_related("interpretation__examination__delivery__material_version", "decision__by")
+        InterpretationVersion.objects.filter(
+            state__in=[str(State.REJECTED), str(State.WITHDRAWN)], revisions__isnull=True
+        )
+        .select_related("interpretation__examination__delivery__material_version", "decision__by", "withdrawal__by")
         .prefetch_related("interpretation__examination__samples")
     )
     return list(_by_urgency(rows)[:limit])

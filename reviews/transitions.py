@@ -82,7 +82,7 @@ WITH_REVIEWER = (State.READING_BLIND, State.IN_REVIEW)
 
 STATE_WORDS: dict[State, str] = {
     State.DRAFT: "being interpreted",
-    State.SUBMITTED: "waits for a second reading",
+    State.SUBMITTED: "waiting for a second reading",
     State.READING_BLIND: "being read blind",
     State.IN_REVIEW: "being reviewed",
     State.APPROVED: "approved",

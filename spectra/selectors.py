@@ -213,6 +213,17 @@ def earlier_examinations(examination: Examination) -> QuerySet[Examination]:
     )
 
 
+def same_bytes_elsewhere(spectrum: Spectrum) -> list[Examination]:
+    """Other examinations into which the file of this spectrum was brought too."""
+    return list(
+        Examination.objects.filter(uploads__raw_file=spectrum.upload.raw_file_id, uploads__state="read")
+        .exclude(pk=spectrum.examination_id)
+        .distinct()
+        .prefetch_related("samples")
+        .order_by("pk")[:10]
+    )
+
+
 def spectra_of(examination: Examination) -> QuerySet[Spectrum]:
     return examination.spectra.select_related(
         "upload__raw_file", "accessory__instrument", "prepared_by", "measured_by"

@@ -10,7 +10,7 @@ from django.urls import reverse
 from labsite.accounts.models import User
 from labsite.errors import DomainError
 from reviews import permissions, selectors
-from reviews.models import Claim, ClaimKind, ClaimStatus, Conclusion, InterpretationVersion
+from reviews.models import Claim, ClaimKind, ClaimStatus, Conclusion, Decision, InterpretationVersion, Withdrawal
 from reviews.services import drafts
 from reviews.transitions import Action, State
 from reviews.words import VERDICTS
@@ -35,6 +35,14 @@ def lanes(result: Mapping, claimed: Sequence[str]) -> dict[str, list[dict[str, o
 
 def claimed_groups(version: InterpretationVersion) -> list[str]:
     return [claim.subject for claim in version.claims.all() if claim.kind == ClaimKind.GROUP]
+
+
+def measurement_cautions(spectrum: Spectrum, result: Mapping) -> list[dict[str, object]]:
+    """What to mind before reading, for _findings.html: the measurement's findings, its instrument check, its file."""
+    around = [selectors.check_sentence(spectrum), selectors.same_file_sentence(spectrum)]
+    return [{"severity": "warning", "message": sentence} for sentence in around if sentence] + [
+        finding for finding in result.get("findings", ()) if finding["severity"] != "info" or finding.get("remedy")
+    ]
 
 
 def band_rows(result: Mapping) -> list[dict[str, object]]:
@@ -75,6 +83,8 @@ def claim_item(claim: Claim, *, lanes_by_group: Mapping[str, Sequence[float]]) -
     positions = list(lanes_by_group.get(claim.subject, ())) if claim.kind == ClaimKind.GROUP else []
     if "position_cm1" in evidence:
         positions = [evidence["position_cm1"]]
+    # A changed verdict must not stand over the sentence of the computed one.
+    is_limit = claim.kind == ClaimKind.IMPURITY and claim.verdict == claim.computed_verdict
     version_args = [claim.version_id, claim.pk]
     return {
         "id": claim.pk,
@@ -90,7 +100,7 @@ def claim_item(claim: Claim, *, lanes_by_group: Mapping[str, Sequence[float]]) -
         "would_decide": evidence.get("would_decide", []),
         "hazard": evidence.get("hazard", ""),
         "weight": evidence.get("weight", ""),
-        "limit": claim.computed_text if claim.kind == ClaimKind.IMPURITY else "",
+        "limit": claim.computed_text if is_limit else "",
         "band_positions_cm1": positions,
         "must_see": claim.must_see,
         "must_see_why": "The reviewer has to open this before deciding.",
@@ -153,7 +163,7 @@ def bench_state(version: InterpretationVersion, user: User) -> dict[str, object]
 def read_only_sentence(version: InterpretationVersion, user: User) -> str:
     if version.state == State.DRAFT:
         return "Only an analyst can work on the claims."
-    return f"This version is {version.get_state_display()}: its claims stay as they were signed."
+    return f"Version {version.number} is {version.get_state_display()}: its claims stay as they were signed."
 
 
 def bench_conclusion(version: InterpretationVersion) -> dict[str, object]:
@@ -168,23 +178,27 @@ def bench_conclusion(version: InterpretationVersion) -> dict[str, object]:
     }
 
 
-def decision_note(version: InterpretationVersion) -> dict[str, object] | None:
+def decision_notes(version: InterpretationVersion) -> list[dict[str, object]]:
+    """What was decided on a version, each act with its own person, time, meaning and signature, in order."""
+    notes = []
     decision = getattr(version, "decision", None)
-    if decision is None:
-        return None
-    withdrawal = getattr(version, "withdrawal", None)
-    reasons = [reason["text"] for reason in decision.reasons]
-    if decision.comment:
-        reasons.append(decision.comment)
-    if withdrawal:
-        reasons.append(
-            f"Withdrawn by {withdrawal.by.printed_name}, {selectors.utc(withdrawal.at)}: {withdrawal.reason}"
+    if decision is not None:
+        reasons = [reason["text"] for reason in decision.reasons]
+        notes.append(
+            _signed_note(decision, decision.verdict, reasons + ([decision.comment] if decision.comment else []))
         )
+    withdrawal = getattr(version, "withdrawal", None)
+    if withdrawal is not None:
+        notes.append(_signed_note(withdrawal, "withdrawn", [withdrawal.reason]))
+    return notes
+
+
+def _signed_note(act: Decision | Withdrawal, state: str, reasons: list[str]) -> dict[str, object]:
     return {
-        "state": version.state,
-        "by": decision.by.printed_name,
-        "at": decision.at,
-        "meaning": decision.signature.get_meaning_display(),
+        "state": state,
+        "by": act.signature.printed_name,
+        "at": act.signature.signed_at,
+        "meaning": act.signature.get_meaning_display(),
         "reasons": reasons,
-        "signature_digest": decision.signature.digest,
+        "signature_digest": act.signature.digest,
     }

@@ -17,7 +17,7 @@ from reviews.models import InterpretationVersion
 from reviews.transitions import State
 from spectra import permissions as spectra_permissions
 from spectra import selectors as spectra_selectors
-from spectra.models import AnalysisState, Examination, Sample, Spectrum, SpectrumRole
+from spectra.models import AnalysisState, Examination, Priority, Sample, Spectrum, SpectrumRole
 
 CONCLUSION_AGREES = {"complies": "yes", "does_not_comply": "no", "inconclusive": "neutral", "": "neutral"}
 
@@ -36,11 +36,22 @@ def sample_url(examination: Examination) -> str:
     return reverse("reviews:sample", args=[sample.pk]) if sample else reverse("reviews:samples")
 
 
+def numbers_in_words(numbers: Sequence[int]) -> str:
+    """1, 2, 3, 5 as "1-3, 5"."""
+    runs: list[list[int]] = []
+    for number in sorted(numbers):
+        if runs and number == runs[-1][1] + 1:
+            runs[-1][1] = number
+        else:
+            runs.append([number, number])
+    return ", ".join(f"{first}" if first == last else f"{first}-{last}" for first, last in runs)
+
+
 def headline_facts(examination: Examination) -> list[dict[str, str]]:
     """The facts beside a sample's number, for _headline.html."""
     delivery = examination.delivery
     sample = sample_of(examination)
-    containers = ", ".join(str(container.number) for container in sample.containers.all()) if sample else ""
+    containers = numbers_in_words([container.number for container in sample.containers.all()]) if sample else ""
     facts = [
         {"name": "declared", "value": delivery.material_version.name},
         {
@@ -64,13 +75,14 @@ def measurement_facts(spectrum: Spectrum) -> list[dict[str, str]]:
     if spectrum.resolution_cm1:
         facts.append({"name": "resolution", "value": f"{spectrum.resolution_cm1:g} cm⁻¹"})
     facts.append({"name": "range", "value": f"{spectrum.last_cm1:.0f} to {spectrum.first_cm1:.0f} cm⁻¹"})
-    trouble = selectors.check_sentence(spectrum)
-    facts.append({"name": "instrument check", "value": trouble or "valid at upload"})
+    facts.append(
+        {"name": "instrument check", "value": "see below" if selectors.check_sentence(spectrum) else "valid at upload"}
+    )
     return facts
 
 
 def life_line(examination: Examination, version: InterpretationVersion | None) -> list[dict[str, object]]:
-    """received, measured, analysed, interpreted, reviewed: where the sample stands, for _headline.html."""
+    """received, spectrum in, analysed, interpreted, decided: where the sample stands, for _headline.html."""
     decisive = spectra_selectors.decisive_spectrum(examination)
     analysis = spectra_selectors.latest_analysis(decisive) if decisive else None
     finished = analysis.finished_at if analysis and analysis.state == AnalysisState.DONE else None
@@ -78,7 +90,7 @@ def life_line(examination: Examination, version: InterpretationVersion | None) -
     decision = getattr(version, "decision", None) if version else None
     steps: list[tuple[str, str, datetime | None]] = [
         ("received", "received", examination.opened_at),
-        ("measured", "waits for a spectrum", decisive.created_at if decisive else None),
+        ("spectrum in", "waits for a spectrum", decisive.created_at if decisive else None),
         ("analysed", "being analysed", finished),
         ("interpreted", "being interpreted", submitted),
         (
@@ -87,6 +99,9 @@ def life_line(examination: Examination, version: InterpretationVersion | None) -
             decision.at if decision else None,
         ),
     ]
+    withdrawal = getattr(version, "withdrawal", None) if version else None
+    if withdrawal is not None:
+        steps.append(("withdrawn", "withdrawn", withdrawal.at))
     line, now_set = [], False
     for done, now, when in steps:
         state = "done" if when else "ahead" if now_set else "now"
@@ -134,7 +149,7 @@ def work_row(
         "age": selectors.age_in_words(since),
         "due": delivery.due_on,
         "late": is_late(delivery.due_on),
-        "priority": "high" if delivery.priority == 1 else "",
+        "priority": {Priority.URGENT: "high", Priority.LOW: "low"}.get(delivery.priority, ""),
         "why": why,
     }
 
@@ -177,7 +192,7 @@ def _sample_row(
         "material": delivery.material_version.name,
         "lot": delivery.lot,
         "lot_url": reverse("reviews:delivery", args=[delivery.pk]),
-        "containers": "container " + ", ".join(str(container.number) for container in sample.containers.all()),
+        "containers": "container " + numbers_in_words([container.number for container in sample.containers.all()]),
         "form": sample.get_kind_display(),
         "state": state,
         "conclusion": version.conclusion if version else "",

@@ -28,6 +28,7 @@ KIND_WORDS = {
     "procedure": "procedure",
     "excluded": "excluded spectrum",
     "rerun": "measured again",
+    "same_file": "same measurement",
     "revision": "revision",
     "conclusion": "conclusion",
 }

@@ -30,13 +30,18 @@ from reviews.words import VERDICTS, agrees_after, verdict_words
 from spectra import selectors as spectra_selectors
 from spectra.models import Analysis, ContributionKind, Examination, SpectrumRole
 from spectra.services.receiving import contribute
+from spectra.subjects import examination_subject
 
 CONSISTENT = ("consistent", "consistent_with_differences")
 
 
 def subject_of(version: InterpretationVersion) -> Subject:
-    examination = version.interpretation.examination
-    return Subject("examination", str(examination.pk), examination.code)
+    return examination_subject(version.interpretation.examination)
+
+
+def label_of(version: InterpretationVersion) -> str:
+    """How people know a version in the trail: by its examination's number, not by a row."""
+    return f"{subject_of(version).label}, version {version.number}"
 
 
 def locked(version_id: int) -> InterpretationVersion:
@@ -160,6 +165,12 @@ def confirm_claim(*, version_id: int, claim_id: int, by: User) -> Claim:
         claim = _claim(version, claim_id)
         if claim.status == ClaimStatus.ADDED:
             raise NotPossible("claim.added", "A claim you added needs no confirmation.")
+        if claim.status == ClaimStatus.CONFIRMED and claim.stated_by_id != by.pk:
+            raise NotPossible(
+                "claim.confirmed_already",
+                f"{claim.stated_by.printed_name} has confirmed this claim already.",
+                remedy="Go on with the next one, or change it and say why.",
+            )
         old = {"verdict": claim.verdict, "status": claim.status}
         _confirm(claim, by)
         _edited(version, by, ContributionKind.CLAIMED)
@@ -420,6 +431,7 @@ def submit(*, version_id: int, by: User, proof: SigningProof, content_hash: str)
             subject_id=str(version.pk),
             content_hash=actual,
             meaning=Meaning.PERFORMED,
+            label=label_of(version),
         )
         _freeze_points(version, points)
         version.content = content.canonical(document)

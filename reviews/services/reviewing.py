@@ -25,7 +25,7 @@ from reviews.models import (
     Verdict,
     Withdrawal,
 )
-from reviews.services.drafts import locked, subject_of
+from reviews.services.drafts import label_of, locked, subject_of
 from reviews.transitions import WITH_REVIEWER, Action, State, next_state
 from spectra.models import ContributionKind
 from spectra.services.receiving import contribute
@@ -275,6 +275,7 @@ def _decide(
         subject_id=str(version.pk),
         content_hash=version.content_hash,
         meaning=Meaning.REVIEWED,
+        label=label_of(version),
     )
     decision = Decision.objects.create(
         version=version,
@@ -331,6 +332,7 @@ def withdraw(*, version_id: int, by: User, proof: SigningProof, content_hash: st
             subject_id=str(version.pk),
             content_hash=version.content_hash,
             meaning=Meaning.WITHDRAWN,
+            label=label_of(version),
         )
         withdrawal = Withdrawal.objects.create(
             version=version, by=by, at=timezone.now(), reason=reason.strip(), signature=signature

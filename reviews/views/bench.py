@@ -80,7 +80,7 @@ def _bench_page(
         return render(request, "reviews/bench.html", context, status=status)
     result = spectra_selectors.result_of(analysis)
     context |= {
-        "findings": result.get("findings", []),
+        "findings": presenting.measurement_cautions(spectrum, result),
         "reading_findings": spectrum.reading_findings,
         "plot": presenting.plot(spectrum, analysis, result),
         "masked": result.get("masked", []),
@@ -105,7 +105,7 @@ def _bench_page(
             "claims": claims,
             "add_claim": add_claim or _empty_claim(current),
             "conclusion": conclusion or presenting.bench_conclusion(current),
-            "decision": presenting.decision_note(current),
+            "decisions": presenting.decision_notes(current),
         }
     return render(request, "reviews/bench.html", context, status=status)
 
@@ -192,6 +192,7 @@ def _claim_answer(request: HttpRequest, row: InterpretationVersion, claim: Claim
 
 
 @page_for(*spectra_permissions.READERS)
+@plot_page
 @require_POST
 def confirm_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
     claim = drafts.confirm_claim(version_id=pk, claim_id=claim_pk, by=request.user)
@@ -199,6 +200,7 @@ def confirm_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
 
 
 @page_for(*spectra_permissions.READERS)
+@plot_page
 @require_POST
 def change_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
     typed = {"verdict": request.POST.get("verdict", ""), "reason": request.POST.get("reason", "")}
@@ -224,6 +226,7 @@ def confirm_uneventful(request: HttpRequest, pk: int) -> HttpResponse:
 
 
 @page_for(*spectra_permissions.READERS)
+@plot_page
 @require_POST
 def add_claim(request: HttpRequest, pk: int) -> HttpResponse:
     row = selectors.version(pk)
@@ -259,6 +262,7 @@ def remove_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
 
 
 @page_for(*spectra_permissions.READERS)
+@plot_page
 @require_POST
 def write_conclusion(request: HttpRequest, pk: int) -> HttpResponse:
     row = selectors.version(pk)

@@ -17,7 +17,7 @@ from reviews.services import drafts
 from reviews.transitions import Action
 from spectra import permissions as spectra_permissions
 from spectra import selectors as spectra_selectors
-from spectra.models import Examination, Sample
+from spectra.models import Examination, Sample, Upload
 from spectra.services import analyses, receiving, uploads
 
 PAGE = 50
@@ -258,6 +258,7 @@ def upload(request: HttpRequest, pk: int) -> HttpResponse:
             )
         elif brought.state == "read":
             read += 1
+            _say_what_it_is(request, brought)
         else:
             messages.warning(request, f"{brought.file_name} needs an answer before it can be read: see below.")
     if refused:
@@ -267,9 +268,15 @@ def upload(request: HttpRequest, pk: int) -> HttpResponse:
             for item in refused:
                 messages.error(request, f"{item['file']} was refused: {item['message']} {item['remedy']}".strip())
         return response
-    if read:
-        messages.success(request, f"{read} file{'s' if read > 1 else ''} read and stored.")
     return redirect(presenting.sample_url(examination))
+
+
+def _say_what_it_is(request: HttpRequest, brought: Upload) -> None:
+    roles = ", ".join(dict.fromkeys(spectrum.get_role_display() for spectrum in brought.spectra.all()))
+    messages.success(request, f"{brought.file_name} was read and stored: {roles} spectrum.")
+    for spectrum in brought.spectra.all():
+        if sentence := selectors.same_file_sentence(spectrum):
+            messages.warning(request, sentence)
 
 
 @page_for(*spectra_permissions.READERS)

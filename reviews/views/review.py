@@ -64,7 +64,7 @@ def _review_page(
         "total": len(points),
         "may_judge": deciding,
         "reviewer_label": "you" if reviewer == user else reviewer.printed_name if reviewer else "reviewer",
-        "findings": result.get("findings", []),
+        "findings": presenting.measurement_cautions(row.analysis.spectrum, result),
         "rows": rows,
         "differing": sum(1 for line in rows if line["differs"]),
         "conclusion": {
@@ -99,7 +99,7 @@ def _review_page(
         "revise_url": reverse("reviews:revise", args=[row.pk])
         if permissions.may(user, row, Action.REVISE) and not row.revisions.exists()
         else "",
-        "decision": presenting.decision_note(row),
+        "decisions": presenting.decision_notes(row),
         "trail_url": reverse("trail:record", args=["examination", examination.pk]),
     }
     context |= presenting.lanes(result, presenting.claimed_groups(row))

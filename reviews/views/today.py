@@ -27,7 +27,7 @@ def today(request: HttpRequest) -> HttpResponse:
     if user.has_role(Role.REVIEWER):
         sections.append(_proposals(user))
     if user.has_role(Role.ANALYST):
-        sections += [_answers(), _rejected(), _drafts(), _in_analysis(), _waiting_for_files()]
+        sections += [_answers(), _sent_back(), _drafts(), _in_analysis(), _waiting_for_files()]
     if user.has_role(Role.QA_MANAGER):
         sections += [_trail_status(), _ageing(), _overrides(), _decided()]
     if user.has_role(Role.METHOD_OWNER, Role.QA_MANAGER):
@@ -81,15 +81,16 @@ def _answers() -> dict[str, object]:
     return {"title": "Disagreements to answer", "rows": rows, "empty": "No reviewer waits for an answer."}
 
 
-def _rejected() -> dict[str, object]:
-    rows = [
-        _version_row(
-            version,
-            since=version.decision.at,
-            why="Rejected: " + "; ".join(reason["text"] for reason in version.decision.reasons),
-        )
-        for version in selectors.rejected_unrevised()
-    ]
+def _sent_back() -> dict[str, object]:
+    rows = []
+    for version in selectors.sent_back():
+        withdrawal = getattr(version, "withdrawal", None)
+        if withdrawal is not None:
+            since, why = withdrawal.at, f"Withdrawn by {withdrawal.by.printed_name}: {withdrawal.reason}"
+        else:
+            since = version.decision.at
+            why = "Rejected: " + "; ".join(reason["text"] for reason in version.decision.reasons)
+        rows.append(_version_row(version, since=since, why=why))
     return {"title": "Sent back", "rows": rows, "empty": "Nothing was sent back."}
 
 

@@ -31,6 +31,7 @@ from spectra.models import (
     ReferenceMatch,
     Spectrum,
 )
+from spectra.subjects import examination_subject
 
 
 class LeaseLost(Exception):
@@ -42,8 +43,7 @@ def worker_name() -> str:
 
 
 def _subject(analysis: Analysis) -> Subject:
-    examination = analysis.spectrum.examination
-    return Subject("examination", str(examination.pk), examination.code)
+    return examination_subject(analysis.spectrum.examination)
 
 
 def queue_analysis(*, spectrum: Spectrum, by: User) -> Analysis:

@@ -24,6 +24,7 @@ from spectra.models import (
     SampleKind,
 )
 from spectra.services.numbering import next_code
+from spectra.subjects import examination_subject
 
 MAX_CONTAINERS = 500
 
@@ -179,7 +180,7 @@ def _open_examination(*, by: User, delivery: Delivery, samples: Sequence[Sample]
     record(
         Event.EXAMINATION_OPENED,
         by=by,
-        subject=Subject("examination", str(examination.pk), examination.code),
+        subject=examination_subject(examination),
         facts={
             "samples": [sample.code for sample in samples],
             "delivery": delivery.code,

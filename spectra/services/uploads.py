@@ -14,7 +14,7 @@ from django.utils import timezone
 
 from labsite.accounts.models import User
 from labsite.errors import BadInput, NotPossible, NotVisible
-from labsite.trail.events import Event, Subject
+from labsite.trail.events import Event
 from labsite.trail.record import record, unit_of_work
 from spectra import arrays, hooks, permissions, selectors, store
 from spectra.core import formats
@@ -31,6 +31,7 @@ from spectra.models import (
 from spectra.reading import read_options
 from spectra.services.analyses import queue_analysis
 from spectra.services.receiving import contribute
+from spectra.subjects import examination_subject
 
 # The roles whose spectra show the sample; a background or a blank is kept and looked at, not interpreted.
 READ_ROLES = (SpectrumRole.DECISIVE, SpectrumRole.REPLICATE, SpectrumRole.REPEAT)
@@ -125,7 +126,7 @@ def bring_file(*, examination_id: int, by: User, file_name: str, data: bytes, fa
         record(
             Event.RAW_FILE_STORED,
             by=by,
-            subject=_subject(examination),
+            subject=examination_subject(examination),
             facts={"file": name, "sha256": sha256, "size_bytes": len(data), "already_in_store": not fresh},
         )
         contribute(examination=examination, user=by, kind=ContributionKind.UPLOADED)
@@ -158,7 +159,7 @@ def answer_upload(*, upload_id: int, by: User, answers: Mapping[str, object], fa
         record(
             Event.RAW_FILE_ANSWERED,
             by=by,
-            subject=_subject(examination),
+            subject=examination_subject(examination),
             facts={"file": upload.file_name, "question": upload.question, "sha256": upload.raw_file.sha256},
             old={"answers": upload.answers},
             new={"answers": told},
@@ -193,7 +194,7 @@ def _take_in(*, upload: Upload, result: ReadResult, by: User, facts: Measurement
         record(
             Event.RAW_FILE_REFUSED,
             by=by,
-            subject=_subject(upload.examination),
+            subject=examination_subject(upload.examination),
             facts={"file": upload.file_name, "sha256": upload.raw_file.sha256, "code": problem.code},
             reason=problem.message,
         )
@@ -243,7 +244,7 @@ def _make_spectrum(
     record(
         Event.SPECTRUM_READ,
         by=by,
-        subject=_subject(examination),
+        subject=examination_subject(examination),
         facts={
             "file": upload.file_name,
             "sha256": upload.raw_file.sha256,
@@ -345,13 +346,9 @@ def _record_role(spectrum: Spectrum, by: User, old: str, reason: str) -> None:
     record(
         event,
         by=by,
-        subject=_subject(spectrum.examination),
+        subject=examination_subject(spectrum.examination),
         facts={"file": spectrum.upload.file_name, "block": spectrum.block_index},
         old={"role": old},
         new={"role": spectrum.role},
         reason=reason,
     )
-
-
-def _subject(examination: Examination) -> Subject:
-    return Subject("examination", str(examination.pk), examination.code)

@@ -94,7 +94,7 @@ def uploads(analyst: Person, measured: Path, tmp_path: Path) -> None:
 
     page.get_by_label("Drop files here, or choose them").set_input_files(measured)
     page.get_by_role("button", name="Upload and analyse").click()
-    analyst.sees("1 file read and stored.")
+    analyst.sees("was read and stored: decisive spectrum.")
     row = page.locator("tr", has_text="isopropanol.jdx")
     expect(row.locator("progress")).to_be_visible()  # the real worker is at it; the row asks for itself
     expect(row).to_contain_text("analysed", timeout=30_000)
@@ -235,10 +235,8 @@ def opens_points(reviewer: Person, *, judge: bool) -> None:
         return
     for mark in [point.get_attribute("id") for point in page.locator(".point").all()]:
         point = page.locator(f"#{mark}")
-        point.locator("summary").first.click()
-        point.get_by_label("agree", exact=True).check()
-        point.get_by_label(re.compile("^Note")).fill("Seen on the plot.")
-        point.get_by_role("button", name="Record").click()
+        point.get_by_label(re.compile("^Your comment")).fill("Seen on the plot.")
+        point.get_by_role("button", name=re.compile("^Agree")).click()
         expect(point.locator(".point-state")).to_contain_text("agree")
 
 
