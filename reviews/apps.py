@@ -8,9 +8,10 @@ class ReviewsConfig(AppConfig):
 
     def ready(self) -> None:
         from labsite.context import register_place
-        from reviews import integrity
+        from reviews import integrity, trail_words
         from spectra.permissions import READERS
 
         integrity.register()
+        trail_words.register()
         register_place("Today", "reviews:today", order=10)
         register_place("Samples", "reviews:samples", roles=READERS, order=20)

@@ -130,7 +130,13 @@ def compute(analysis: Analysis, *, progress: Callable[[str, float], None] | None
         forbidden_groups=tuple(material.forbidden_groups),
         progress=progress,
     )
-    document = result.to_json()
+    # What the verdicts were held against belongs to the result: the material's record may have moved on when it is read.
+    document = result.to_json() | {
+        "declared": {
+            "expected_groups": list(material.expected_groups),
+            "forbidden_groups": list(material.forbidden_groups),
+        }
+    }
     data = rfc8785.dumps(document)
     return Outcome(
         result=document,
