@@ -119,7 +119,7 @@ class AnswerForm(forms.Form):
     def clean_columns(self):
         text = self.cleaned_data["columns"].strip()
         parts = re.split(r"[,;\s]+", text)
-        if not all(part.isdigit() and 0 < int(part) < 1000 for part in parts):
+        if not all(re.fullmatch(r"[0-9]{1,3}", part) and int(part) > 0 for part in parts):
             raise forms.ValidationError("Write column numbers, for example 2, 3.")
         return [int(part) for part in parts]
 

@@ -74,6 +74,8 @@ KINDS = ("band", "plateau")
 STATUSES = ("confirmed", "memory")
 LIMITS_CM1 = (150.0, 5000.0)
 LARGEST_TABLE_CHARACTERS = 400_000
+LONGEST_LINE_CHARACTERS = 2_000
+DEEPEST_KEY = 4
 
 _GROUP_KEYS = {
     "id",
@@ -190,6 +192,26 @@ class GroupTable:
         raise KeyError(group_id)
 
 
+def _judge_lines(text: str) -> None:
+    """Refuse, before anything parses it, what takes the parser minutes and gigabytes: endless lines and nesting."""
+    for number, line in enumerate(text.splitlines(), start=1):
+        if len(line) > LONGEST_LINE_CHARACTERS:
+            raise CoreError(
+                "group_table.line_too_long",
+                f"Line {number} holds more than {LONGEST_LINE_CHARACTERS} characters.",
+                line=number,
+                remedy="Break it into several entries.",
+            )
+        key = line.partition("=")[0]
+        if key.count(".") > DEEPEST_KEY or key.count("[") > DEEPEST_KEY:
+            raise CoreError(
+                "group_table.too_deep",
+                f"Line {number} nests deeper than the table's own layout.",
+                line=number,
+                remedy="Write groups, bands and classes as in the shipped table.",
+            )
+
+
 def load(text: str) -> GroupTable:
     """Parse and judge a table.
 
@@ -201,9 +223,10 @@ def load(text: str) -> GroupTable:
             f"The table holds more than {LARGEST_TABLE_CHARACTERS} characters.",
             remedy="Remove what is not a group row.",
         )
+    _judge_lines(text)
     try:
         data = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except (tomllib.TOMLDecodeError, RecursionError, ValueError) as error:  # ValueError: a number of endless digits
         raise CoreError(
             "group_table.syntax", f"The table is not valid TOML: {error}.", remedy="Correct the line that is named."
         ) from error

@@ -179,8 +179,32 @@ class MethodParams:
                 )
             elif isinstance(default, float) and isinstance(value, int) and not isinstance(value, bool):
                 value = float(value)
+            for number, usual in zip(_numbers(value), _numbers(default), strict=True):
+                _judge_size(name, number, usual)
             given[name] = value
         return cls(**given)
+
+
+# How far a parameter may lie from the shipped one: beyond it an analysis would take hours or mean nothing.
+SIZE_FACTOR = 100
+
+
+def _numbers(value: object) -> tuple[object, ...]:
+    return value if isinstance(value, tuple) else (value,)
+
+
+def _judge_size(name: str, number: object, usual: object) -> None:
+    """Refuse a number that lies orders of magnitude from the shipped value of its parameter; others judge its kind."""
+    if not all(isinstance(n, (int, float)) and not isinstance(n, bool) and math.isfinite(n) for n in (number, usual)):
+        return
+    most = SIZE_FACTOR * max(abs(usual), 1.0)
+    least = abs(usual) / SIZE_FACTOR if usual else 0.0
+    if abs(number) > most or (usual and abs(number) < least):
+        raise CoreError(
+            "params.size",
+            f"Parameter {name} is {number:g}; it has to lie between {least:g} and {most:g}.",
+            remedy="Stay within a factor of a hundred of the shipped value.",
+        )
 
 
 # Absolute differences within which a repeated result counts as equal; another processor moves last bits, not these.
