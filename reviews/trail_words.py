@@ -21,7 +21,6 @@ LABELS = {
     "reasons": "Reasons for the rejection",
     "revises": "Revises version",
     "status": "Standing",
-    "text": "Comment on the conclusion",
     "conclusion_text": "Comment on the conclusion",
     "undecided": "Expected groups undecided",
     "unseen": "Contaminants that cannot be seen",

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from urllib.parse import urlencode
+
 from django.conf import settings
 from django.contrib import messages
 from django.http import HttpRequest, HttpResponse
@@ -32,14 +34,14 @@ def samples(request: HttpRequest) -> HttpResponse:
         text=text, before_pk=int(before) if before.isdecimal() and len(before) < 19 else None, limit=PAGE + 1
     )
     shown = found[:PAGE]
-    older = f"?text={text}&before={shown[-1].pk}" if len(found) > PAGE else ""
+    older = "?" + urlencode({"text": text, "before": shown[-1].pk}) if len(found) > PAGE else ""
     return render(
         request,
         "reviews/samples.html",
         {
             "search": {"url": reverse("reviews:samples"), "text": text},
             "rows": presenting.sample_rows(shown),
-            "newer_url": f"?text={text}" if before else "",
+            "newer_url": "?" + urlencode({"text": text}) if before else "",
             "older_url": older,
             "register_url": reverse("reviews:register_delivery")
             if spectra_permissions.may_analyse(request.user)
