@@ -255,9 +255,7 @@ def add_claim(request: HttpRequest, pk: int) -> HttpResponse:
 @page_for(*spectra_permissions.READERS)
 @require_POST
 def remove_claim(request: HttpRequest, pk: int, claim_pk: int) -> HttpResponse:
-    drafts.remove_claim(
-        version_id=pk, claim_id=claim_pk, by=request.user, reason=request.POST.get("reason", "")
-    )
+    drafts.remove_claim(version_id=pk, claim_id=claim_pk, by=request.user, reason=request.POST.get("reason", ""))
     return redirect("reviews:bench", pk=selectors.version(pk).analysis.spectrum_id)
 
 

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from functools import partial
+
 from django.contrib import messages
 from django.http import HttpRequest, HttpResponse
 from django.shortcuts import redirect, render
@@ -252,6 +255,19 @@ def settle_point(request: HttpRequest, pk: int, point_pk: int) -> HttpResponse:
     )
 
 
+def _signed(request: HttpRequest, form: SignatureForm, act: Callable[..., object]) -> bool:
+    """Prove the password and do the act over the hash that was shown. A refusal stands in the form afterwards."""
+    if not form.is_valid():
+        return False
+    try:
+        proof = signing.prove(request, password=form.cleaned_data["password"])
+        act(by=request.user, proof=proof, content_hash=form.cleaned_data["content_hash"])
+    except BadInput as error:
+        add_error(form, error)
+        return False
+    return True
+
+
 @page_for(*spectra_permissions.READERS)
 @plot_page
 @require_POST
@@ -260,21 +276,9 @@ def approve(request: HttpRequest, pk: int) -> HttpResponse:
     permissions.require(request.user, row, Action.APPROVE)
     form = SignatureForm(request.POST, prefix="approve")
     comment = request.POST.get("comment", "")
-    if form.is_valid():
-        try:
-            proof = signing.prove(request, password=form.cleaned_data["password"])
-            reviewing.approve(
-                version_id=pk,
-                by=request.user,
-                proof=proof,
-                content_hash=form.cleaned_data["content_hash"],
-                comment=comment,
-            )
-        except BadInput as error:
-            add_error(form, error)
-        else:
-            messages.success(request, f"Version {row.number} is approved.")
-            return redirect("reviews:review", pk=pk)
+    if _signed(request, form, partial(reviewing.approve, version_id=pk, comment=comment)):
+        messages.success(request, f"Version {row.number} is approved.")
+        return redirect("reviews:review", pk=pk)
     return _review_page(request, row, approve={"form": form, "comment": comment}, status=422)
 
 
@@ -293,21 +297,9 @@ def reject(request: HttpRequest, pk: int) -> HttpResponse:
     given: dict[str, object] = {"form": form, "typed": typed, "general": general}
     if not any(reason["text"].strip() for reason in reasons):
         given["errors"] = {"reasons": "Give at least one reason: the analyst has to know what to mend."}
-    elif form.is_valid():
-        try:
-            proof = signing.prove(request, password=form.cleaned_data["password"])
-            reviewing.reject(
-                version_id=pk,
-                by=request.user,
-                proof=proof,
-                content_hash=form.cleaned_data["content_hash"],
-                reasons=reasons,
-            )
-        except BadInput as error:
-            add_error(form, error)
-        else:
-            messages.success(request, f"Version {row.number} is rejected; the analyst sees your reasons.")
-            return redirect("reviews:review", pk=pk)
+    elif _signed(request, form, partial(reviewing.reject, version_id=pk, reasons=reasons)):
+        messages.success(request, f"Version {row.number} is rejected; the analyst sees your reasons.")
+        return redirect("reviews:review", pk=pk)
     return _review_page(request, row, reject=given, status=422)
 
 
@@ -322,19 +314,7 @@ def withdraw(request: HttpRequest, pk: int) -> HttpResponse:
     given: dict[str, object] = {"form": form, "reason": reason}
     if not reason.strip():
         given["errors"] = {"reason": "Say why the approved version is withdrawn."}
-    elif form.is_valid():
-        try:
-            proof = signing.prove(request, password=form.cleaned_data["password"])
-            reviewing.withdraw(
-                version_id=pk,
-                by=request.user,
-                proof=proof,
-                content_hash=form.cleaned_data["content_hash"],
-                reason=reason,
-            )
-        except BadInput as error:
-            add_error(form, error)
-        else:
-            messages.success(request, f"Version {row.number} is withdrawn; it stays readable.")
-            return redirect("reviews:review", pk=pk)
+    elif _signed(request, form, partial(reviewing.withdraw, version_id=pk, reason=reason)):
+        messages.success(request, f"Version {row.number} is withdrawn; it stays readable.")
+        return redirect("reviews:review", pk=pk)
     return _review_page(request, row, withdraw=given, status=422)

@@ -162,3 +162,19 @@ def test_any_shape_ends_in_a_result_or_a_refusal(seed):
         )
         json.dumps(result.to_json(), allow_nan=False)
         assert result.identity is None or result.identity.verdict != "consistent"
+
+
+def test_identity_is_not_called_consistent_where_the_whole_fit_says_otherwise():
+    doubtful = replace(RESULT.impurities, explained_variance=0.9)
+    identity, _ = pipeline._in_agreement(RESULT.identity, doubtful, PARAMS)
+    assert RESULT.identity.verdict == "consistent"
+    assert identity.verdict == "consistent_with_differences" and identity.agrees == "neutral"
+    assert "90.0 %" in identity.against[-1] and identity.would_decide
+    assert pipeline._in_agreement(RESULT.identity, RESULT.impurities, PARAMS) == (RESULT.identity, RESULT.impurities)
+
+
+def test_an_absence_is_not_called_good_beside_an_identity_that_fails():
+    failed = replace(RESULT.identity, verdict="not_consistent", agrees="no")
+    _, screened = pipeline._in_agreement(failed, RESULT.impurities, PARAMS)
+    assert RESULT.impurities.screened[0].agrees == "yes"
+    assert [(item.agrees, item.weight) for item in screened.screened] == [("neutral", "open")]

@@ -237,3 +237,54 @@ def test_output_streams_line_by_line(files):
     with redirect_stdout(Sink()) as sink:
         call_command("examine", str(files["sample"]), str(files["sample"]), "--json", stdout=sink)
     assert Sink.flushed >= 2
+
+
+def changed(path, old, new):
+    """A copy of a file with one header line replaced."""
+    text = path.read_text(encoding="ascii")
+    assert old in text
+    copy = path.with_name(f"changed_{path.name}")
+    copy.write_text(text.replace(old, new), encoding="ascii")
+    return copy
+
+
+def test_an_answer_settles_only_what_the_sample_leaves_open(files):
+    silent = changed(files["sample"], "##YUNITS=ABSORBANCE\n", "##YUNITS=\n")
+    document = json.loads(run(silent, "--ordinate", "absorbance", "--json", "--phase", "liquid")[1])
+    assert document["status"] == "ok" and document["ordinate"]["used"] == "absorbance"
+    stating = json.loads(run(files["sample"], "--ordinate", "transmittance", "--json", "--phase", "liquid")[1])
+    assert stating["ordinate"]["used"] == "absorbance"
+    (said,) = [f for f in stating["findings"] if f["code"] == "examine.answer_not_needed"]
+    assert "ABSORBANCE" in said["message"] and "transmittance was not applied" in said["message"]
+
+
+def test_an_answer_for_the_sample_does_not_touch_a_reference_that_states_its_own(files):
+    silent = changed(files["sample"], "##XUNITS=1/CM\n", "##XUNITS=\n")
+    arguments = ["--declared", files["reference"], "--watch", files["watch"], "--phase", "liquid", "--json"]
+    document = json.loads(run(silent, *arguments, "--x-unit", "cm-1")[1])
+    assert document["identity"]["verdict"] == "consistent"
+    micrometres = json.loads(run(files["sample"], *arguments, "--x-unit", "um")[1])
+    assert micrometres["identity"]["verdict"] == "consistent"
+    said = [f["message"] for f in micrometres["findings"] if f["code"] == "examine.answer_not_needed"]
+    assert len(said) == 3 and any(m.startswith("--declared reference.jdx:") for m in said)
+
+
+def test_what_was_remarked_while_a_reference_was_read_is_shown(files):
+    doubtful = changed(files["reference"], "##NPOINTS=", "##DELTAX=7\n##NPOINTS=")
+    code, out, _ = run(files["sample"], "--declared", doubtful, "--phase", "liquid")
+    assert code == 0 and "--declared changed_reference.jdx: DELTAX is declared as 7" in out
+
+
+def test_a_refusal_says_with_which_option_it_can_be_answered(files):
+    silent = changed(files["sample"], "##XUNITS=1/CM\n", "##XUNITS=\n")
+    code, out, _ = run(silent)
+    assert code == 1 and "REFUSED" in out and "Use --x-unit cm-1, um or nm." in out
+    with pytest.raises(CannotStart, match="Use --x-unit"):
+        Examiner(Request(declared=silent))
+    assert "Name a spectrum file." in run(files["sample"].parent)[1]
+
+
+def test_two_open_questions_are_answered_one_after_the_other(files):
+    silent = changed(files["sample"], "##XUNITS=1/CM\n##YUNITS=ABSORBANCE\n", "##XUNITS=\n##YUNITS=\n")
+    document = json.loads(run(silent, "--x-unit", "cm-1", "--ordinate", "absorbance", "--json")[1])
+    assert document["status"] == "ok" and not [f for f in document["findings"] if f["code"].startswith("examine.")]

@@ -1,5 +1,6 @@
 """Verdicts on functional groups: conservative, explained, and never flipped by a worse measurement."""
 
+import re
 from pathlib import Path
 
 import numpy as np
@@ -9,7 +10,7 @@ from spectra.core import bands, preparation
 from spectra.core.group_table import load
 from spectra.core.groups import weigh_groups
 from spectra.core.params import MethodParams
-from spectra.core.results import GROUP_VERDICTS
+from spectra.core.results import GROUP_VERDICTS, Mask
 from spectra.core.types import Conditions, Phase, Technique
 from tests.numeric.synthetic import ACID, ALCOHOL, ALKANE, ESTER, axis, block, spectrum
 
@@ -83,9 +84,9 @@ def test_no_probability_is_printed_before_calibration():
 def test_every_claim_explains_itself():
     for claim in weighed(ESTER).claims:
         assert claim.verdict in GROUP_VERDICTS and claim.agrees in ("yes", "no", "neutral") and claim.weight
-        if claim.verdict == "supported" and claim.note != "Wider class.":
+        if claim.verdict == "supported" and not claim.members:
             assert claim.for_ and all("cm-1" in sentence for sentence in claim.for_)
-        if claim.verdict == "contradicted" and claim.note != "Wider class.":
+        if claim.verdict == "contradicted" and not claim.members:
             assert claim.against
         if claim.verdict in ("undecided", "not_examined"):
             assert claim.would_decide, claim.group
@@ -141,3 +142,77 @@ def test_lanes_show_windows_with_their_state():
     assert lane.verdict == "supported" and {w.state for w in lane.windows} == {"found"}
     assert all(w.band_positions_cm1 for w in lane.windows)
     assert {w.state for lane in found.lanes for w in lane.windows} <= {"found", "missing", "not_readable"}
+
+
+def sentences(found, group, row):
+    claim = next(c for c in found.claims if c.group == group)
+    return [s for s in (*claim.for_, *claim.against) if s.startswith(f"{row}:")]
+
+
+def window_states(found, group):
+    return {w.label: w.state for w in next(lane for lane in found.lanes if lane.group == group).windows}
+
+
+def test_a_band_beside_a_window_counts_only_within_a_slack_that_is_said():
+    ring = [(3060, 0.2, 15), (1600, 0.3, 12), (1495, 0.6, 12), (700, 1.0, 15)]
+    inside = sentences(weighed([*ring, (1426, 0.2, 12)]), "aromatic", "ring stretch near 1450")
+    assert len(inside) == 1 and "slack 6 cm-1" in inside[0]
+    assert not sentences(weighed([*ring, (1422.9, 0.2, 12)]), "aromatic", "ring stretch near 1450")
+    assert "slack" not in sentences(weighed([*ring, (1450, 0.2, 12)]), "aromatic", "ring stretch near 1450")[0]
+
+
+def test_a_strong_band_is_never_evidence_for_a_weak_row():
+    ring = [(3060, 0.2, 15), (1600, 0.3, 12), (1495, 0.6, 12), (700, 1.0, 15)]
+    strong, weak = weighed([*ring, (1700, 0.9, 20)]), weighed([*ring, (1700, 0.05, 20)])
+    assert not sentences(strong, "aromatic", "summation bands")
+    assert window_states(strong, "aromatic")["summation bands"] == "not_readable"
+    assert sentences(weak, "aromatic", "summation bands")
+
+
+def test_strong_carbon_oxygen_bands_do_not_make_a_weak_alkyl_claim_strong():
+    claim = next(
+        c
+        for c in weighed([(2930, 0.07, 30), (1450, 0.1, 20), (1250, 0.9, 30), (1050, 1.0, 30)]).claims
+        if c.group == "alkane_ch"
+    )
+    assert claim.weight != "strong"
+    assert not [s for s in claim.for_ if "1250" in s or "1050" in s]
+
+
+def test_every_sentence_uses_the_word_of_the_band_table():
+    words = {"vs": "very strong", "s": "strong", "m": "medium", "w": "weak", "vw": "very weak"}
+    for conditions in (LIQUID, Conditions(phase=Phase.LIQUID, technique=Technique.ATR)):
+        x, y = spectrum(ALCOHOL)
+        prepared = preparation.prepare(block(x, y), conditions, PARAMS)
+        table = {f"{b.position_cm1:.1f}": words[b.intensity] for b in bands.pick(prepared, PARAMS, Phase.LIQUID)}
+        for claim in weighed(ALCOHOL, conditions=conditions).claims:
+            for sentence in claim.for_:
+                named = re.search(r"band at ([\d.]+) cm-1 \(([a-z ]+),", sentence)
+                if named:
+                    assert table[named[1]] == named[2], sentence
+
+
+def test_a_depth_scaled_size_is_said_where_the_band_table_names_another():
+    atr = Conditions(phase=Phase.LIQUID, technique=Technique.ATR)
+    # Scaled to one depth, the hydroxyl at 3330 is the largest band, and C-O at 1050 falls to a medium one.
+    found = weighed([(3330, 1.0, 250), (2970, 0.6, 25), (2930, 0.5, 25), (1050, 0.55, 35)], conditions=atr)
+    said = [s for s in sentences(found, "alcohol_oh", "C-O stretch") if "weaker than usual" in s]
+    assert said and "after depth scaling" in said[0]
+
+
+def test_members_of_a_wider_class_that_are_ruled_out_do_not_speak_against_it():
+    claim = next(c for c in weighed(ESTER).claims if c.group == "carbonyl")
+    assert claim.verdict == "supported" and claim.against == ()
+    assert "Members ruled out:" in claim.note and "amide" in claim.note
+
+
+def test_a_region_that_a_moist_matrix_spoils_is_not_read_for_the_groups():
+    x, y = spectrum([*ALCOHOL, (1635, 0.3, 60)])
+    prepared = preparation.prepare(block(x, y), LIQUID, PARAMS)
+    found = weigh_groups(
+        prepared, bands.pick(prepared, PARAMS), TABLE, LIQUID, PARAMS, unreadable=(Mask(3100.0, 3700.0, "moist"),)
+    )
+    claim = next(c for c in found.claims if c.group == "alcohol_oh")
+    assert claim.verdict in ("undecided", "not_examined")
+    assert window_states(found, "alcohol_oh")["O-H stretch, hydrogen bonded"] == "not_readable"
+    assert all(band.position_cm1 < 3100 for band in found.used_by)

@@ -90,3 +90,11 @@ def test_resolution_is_lowered_to_the_coarser_of_the_two():
     x, y = spectrum(ESTER, seed=2)
     coarse = (x, preparation.gaussian_smooth(y, 1.0, 8.0))
     assert compared(coarse, spectrum(ESTER)).verdict == "consistent"
+
+
+def test_the_advice_of_a_common_solvent_is_for_solids_only():
+    liquid = " ".join(compared(spectrum(ALCOHOL, seed=2), spectrum(ESTER)).would_decide)
+    assert "solvent" not in liquid and "label" in liquid and "other containers" in liquid
+    disc = Conditions(phase=Phase.SOLID, technique=Technique.DISC)
+    solid = compared(spectrum(ALCOHOL, seed=2), spectrum(ESTER), disc, disc)
+    assert "same solvent" in " ".join(solid.would_decide)

@@ -6,7 +6,7 @@ import pytest
 from spectra.core import impurities, preparation
 from spectra.core.params import MethodParams
 from spectra.core.results import IMPURITY_VERDICTS
-from spectra.core.types import Conditions, Phase, Technique
+from spectra.core.types import Conditions, Ordinate, Phase, Technique
 from tests.numeric.synthetic import ALCOHOL, ALKANE, ESTER, axis, block, spectrum
 
 PARAMS = MethodParams()
@@ -114,3 +114,56 @@ def test_no_result_claims_purity():
     found = screened(mixture(0.0, SILICONE))
     assert {s.verdict for s in found.screened} <= set(IMPURITY_VERDICTS)
     assert any("neither purity" in note for note in found.notes)
+
+
+def saturated(shape, reference=ESTER):
+    """Screening of a specimen so thick that the largest bands of `shape` let nothing through."""
+    x, a = spectrum(shape, noise=2e-4)
+    sample = preparation.prepare(block(x, 10.0**-a, Ordinate.TRANSMITTANCE), FILM, PARAMS)
+    assert sample.masks
+    return impurities.screen(sample, FILM, prepared(*spectrum(reference, noise=2e-4, seed=9)), FILM, WATCH, PARAMS)[0]
+
+
+def test_nothing_is_cleared_on_a_scale_that_is_totally_absorbed():
+    found = saturated([(p, 3.5 * h, w) for p, h, w in ESTER])
+    assert {s.verdict for s in found.screened} == {"cannot_be_seen"}
+    assert {s.agrees for s in found.screened} == {"neutral"}
+    assert all("totally absorbed" in s.against[0] for s in found.screened)
+    assert found.smallest_claim_fraction is None
+
+
+def test_a_band_nearly_as_strong_stands_in_for_an_absorbed_one_and_is_named():
+    reference = [(p, 1.0 if p == 1240 else 0.97 if p == 1050 else h, w) for p, h, w in ESTER]
+    thick = [(p, 2.3 if p == 1240 else 1.75 if p == 1050 else 1.8 * h, w) for p, h, w in reference]
+    found = saturated(thick, reference)
+    assert any("1240" in note and "1050" in note and "counted from" in note for note in found.notes)
+
+
+@pytest.mark.parametrize(("z", "verdict"), [(-1.5, "not_found_above_limit"), (-3.0, "not_found_above_limit")])
+def test_an_estimate_far_below_zero_widens_its_uncertainty(z, verdict):
+    item = judged(z)
+    assert item.verdict == verdict
+    assert item.significance == pytest.approx(max(z, -2.0))
+    assert item.standard_uncertainty == pytest.approx(0.01 * max(1.0, -z / 2))
+    assert item.detection_limit_fraction >= judged(0.0).detection_limit_fraction
+    assert any("below zero" in sentence for sentence in item.against) == (z < -2)
+
+
+def test_an_estimate_too_far_below_zero_clears_nothing():
+    item = judged(-4.2)
+    assert item.verdict == "cannot_be_seen" and item.agrees == "neutral"
+    assert "negative amount" in item.against[0]
+
+
+def judged(z, sigma=0.01):
+    component = impurities._Judged(WATCH[0], np.zeros(1), np.zeros(1), 1.0)
+    solved = impurities._Solved({"silicone": z * sigma}, {"silicone": sigma}, np.zeros(1), np.zeros(1), 1.0, 1.0, 0.0)
+    return impurities._judge(component, solved, 0.002, "", PARAMS)
+
+
+def test_a_residual_band_is_never_higher_than_the_sample_itself():
+    for sample in (ALCOHOL, SILICONE, [*ESTER, (1600, 0.5, 20)]):
+        x, a = spectrum(sample, noise=1e-3)
+        ready = prepared(x, a)
+        for band in screened(ready, ()).unexplained:
+            assert band.height_absorbance <= np.interp(band.position_cm1, ready.x_cm1, ready.smooth) + 0.01

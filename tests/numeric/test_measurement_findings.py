@@ -98,3 +98,10 @@ def test_a_constant_trace_is_survived():
     x = axis()
     prepared = preparation.prepare(block(x, np.full(len(x), 0.2)), Conditions(), PARAMS)
     assert np.isfinite(prepared.smooth).all()
+
+
+def test_a_normal_noise_is_a_figure_and_no_finding():
+    x, y = spectrum(ESTER)
+    prepared = preparation.prepare(block(x, y), Conditions(), PARAMS)
+    assert prepared.noise_absorbance > 0
+    assert not [f for f in prepared.findings if f.code.startswith("measurement.noise")]

@@ -254,3 +254,13 @@ def test_a_reader_finding_is_information_or_more():
         for finding in read(spectrum.data).blocks[spectrum.block].findings
     }
     assert severities == {Severity.INFO, Severity.WARNING, Severity.SERIOUS}
+
+
+@pytest.mark.parametrize("name", ["ethanol2.jdx", "jtpolysd.jdx", "ammonia.jdx", "methanol.jdx", "m-xylene.jdx"])
+def test_a_spacing_that_lost_its_last_figure_is_no_contradiction(name):
+    assert "reader.deltax_differs" not in codes(block_of(name))
+
+
+def test_a_spacing_that_is_wrong_by_more_than_rounding_is_named():
+    (finding,) = [f for f in block_of("sulphur hexafluoride.jdx").findings if f.code == "reader.deltax_differs"]
+    assert finding.severity is Severity.WARNING and "0.0625" in finding.message and "0.0602" in finding.message

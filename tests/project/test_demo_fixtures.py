@@ -373,3 +373,33 @@ def test_a_good_lot_raises_no_alarm(story, analysed):
     assert [claim.group for claim in result.groups if claim.agrees == "no"] == []
     serious = {finding.code for finding in result.findings if finding.severity != "info"}
     assert serious <= {"measurement.water_vapour", "measurement.carbon_dioxide"}
+
+
+def story_named(key: str) -> Story:
+    return next(story for story in scenario.STORIES if story.key == key)
+
+
+def test_nothing_is_cleared_in_the_saturated_film(analysed):
+    story = story_named("saturated_film")
+    result = analysed(file_of(story, "decisive"), material_of(story))
+    assert result.identity.verdict == "cannot_be_compared"
+    assert {item.verdict for item in result.impurities.screened} == {"cannot_be_seen"}
+    assert {item.agrees for item in result.impurities.screened} == {"neutral"}
+
+
+def test_the_wet_disc_says_nothing_about_hydroxyl_and_is_not_called_consistent(analysed):
+    story = story_named("wet_disc")
+    result = analysed(file_of(story, "decisive"), material_of(story))
+    assert result.identity.verdict == "consistent_with_differences" and result.identity.agrees == "neutral"
+    assert any("less than 95 %" in sentence for sentence in result.identity.against)
+    claims = {claim.group: claim for claim in result.groups}
+    assert claims["amide"].verdict != "supported" and claims["oh_or_nh"].verdict != "supported"
+    states = {
+        window["state"]
+        for lane in result.to_json()["lanes"]
+        for window in lane["windows"]
+        if window["low_cm1"] >= 3100 and window["high_cm1"] <= 3700
+    }
+    assert states == {"not_readable"}
+    moist = [mask for mask in result.to_json()["masked"] if "moist" in mask["reason"]]
+    assert [(mask["low_cm1"], mask["high_cm1"]) for mask in moist] == [(1600.0, 1660.0), (3100.0, 3700.0)]
