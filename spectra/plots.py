@@ -269,7 +269,10 @@ def _spectrum_figure(
 ) -> Any:
     from bokeh.models import ColumnDataSource, HoverTool, Range1d
 
-    low, high = _span(*(values for name, values in columns.items() if name != "x"))
+    # The sample sets the scale: a reference scaled past it, as over a saturated band, runs out of the frame.
+    low, high = _span(columns["y"])
+    others = _span(*(values for name, values in columns.items() if name != "x"))
+    low, high = max(others[0], low - (high - low) / 4), min(others[1], high + (high - low) / 4)
     room = high - low
     # Room above (absorbance) or below (transmittance) the trace for the band positions.
     edges = (low - 0.04 * room, high + 0.2 * room) if show == "absorbance" else (low - 0.2 * room, high + 0.08 * room)

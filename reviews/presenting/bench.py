@@ -84,7 +84,7 @@ def claim_item(claim: Claim, *, lanes_by_group: Mapping[str, Sequence[float]]) -
     if "position_cm1" in evidence:
         positions = [evidence["position_cm1"]]
     # A changed verdict must not stand over the sentence of the computed one.
-    is_limit = claim.kind == ClaimKind.IMPURITY and claim.verdict == claim.computed_verdict
+    is_limit = claim.verdict == claim.computed_verdict and claim.verdict in ("found", "not_found_above_limit")
     version_args = [claim.version_id, claim.pk]
     return {
         "id": claim.pk,
