@@ -34,24 +34,46 @@ digest     SHA-256 in hex over the RFC 8785 bytes of this object without `file` 
 Verdicts, of groups: supported, contradicted, undecided, not_examined; of identity: consistent,
 consistent_with_differences, not_consistent, not_distinguishable, cannot_be_compared; of impurities: found,
 not_found_above_limit, cannot_be_seen. agrees: yes, no, neutral. Nothing here is a record.
+
+Answers (`--x-unit`, `--ordinate`) settle only what a file itself leaves open, in the sample as in every reference; a
+file that states its own is read as it says, and a finding tells so. `findings` begins with what was remarked while the
+references were read, each with the option and the name of its file before it.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 from spectra.core import formats, group_table, pipeline
 from spectra.core.errors import CoreError
+from spectra.core.formats import ordinates
 from spectra.core.formats.limits import MAX_FILE_BYTES
 from spectra.core.params import MethodParams
 from spectra.core.results import AnalysisResult, ReferenceInput, WatchInput
-from spectra.core.types import Conditions, Finding, Problem, ReadOptions, SpectrumBlock
+from spectra.core.types import (
+    Conditions,
+    Finding,
+    Problem,
+    ReadOptions,
+    ReadResult,
+    RefusedBlock,
+    Severity,
+    SpectrumBlock,
+)
 from spectra.core.version import RESULT_SCHEMA
 
 GROUP_TABLE_FILE = Path(__file__).resolve().parent.parent / "fixtures" / "group_table" / "version_1.toml"
 
+# The option that answers a question, by the name of the question and of the field of ReadOptions.
+_OPTIONS = {
+    "x_unit": "--x-unit cm-1, um or nm",
+    "ordinate": "--ordinate absorbance, transmittance, percent_transmittance or reflectance",
+    "columns": "--columns with a list like 1,3",
+    "technique": "--technique atr or diffuse",
+}
+ANSWER_NOT_NEEDED = "examine.answer_not_needed"
 _FINDING_KEYS = ("code", "severity", "message", "region_cm1")
 _BAND_KEYS = (
     "position_cm1",
@@ -95,6 +117,7 @@ class Examined:
 
     document: dict[str, object]
     result: AnalysisResult | None
+    remedy: str = ""  # of a refusal: what to do, and with which option
 
 
 class CannotStart(Exception):
@@ -108,6 +131,7 @@ class Examiner:
         self.request = request
         self.params = MethodParams()
         self.table = group_table.load(GROUP_TABLE_FILE.read_text(encoding="utf-8"))
+        self.reference_findings: list[Finding] = []
         self.reference = self._reference(request.declared) if request.declared else None
         self.watch = tuple(self._component(path) for path in request.watch)
         if request.smiles is not None:
@@ -131,28 +155,40 @@ class Examiner:
             data = read_bytes(path)
         except CoreError as error:
             raise CannotStart(f"{option} {path}: {error} {error.problem.remedy}".strip()) from error
-        result = formats.read(data, self.request.options)
+        result = read_as_stated(data, self.request.options)
         for block in result.blocks:
             if isinstance(block, SpectrumBlock):
+                self.reference_findings += [
+                    replace(
+                        found,
+                        message=f"{option} {path.name}: {found.message}",
+                        # An answer is meant for the sample first, so a reference that needs none is no mistake.
+                        severity=Severity.INFO if found.code == ANSWER_NOT_NEEDED else found.severity,
+                    )
+                    for found in block.findings
+                ]
                 return block, result.sha256
         problem = result.problem or next((block.problem for block in result.blocks), None)
-        raise CannotStart(f"{option} {path}: {problem.message if problem else 'it holds no spectrum.'}")
+        said = f"{problem.message} {remedy_of(problem)}".strip() if problem else "it holds no spectrum."
+        raise CannotStart(f"{option} {path}: {said}")
 
     def examine(self, path: Path, shown: str) -> Iterator[Examined]:
         """Every spectrum of one file; refusals are results, too, so that one bad file stops nothing."""
         try:
-            result = formats.read(read_bytes(path), self.request.options)
+            result = read_as_stated(read_bytes(path), self.request.options)
         except CoreError as error:
-            yield Examined(_refused(shown, None, None, None, error.problem), None)
+            yield Examined(_refused(shown, None, None, None, error.problem), None, remedy_of(error.problem))
             return
         if result.problem is not None or not result.blocks:
             problem = result.problem or Problem("reader.no_block", "The file holds no spectrum.")
-            yield Examined(_refused(shown, result.sha256, None, None, problem), None)
+            yield Examined(_refused(shown, result.sha256, None, None, problem), None, remedy_of(problem))
             return
         for block in result.blocks:
             if not isinstance(block, SpectrumBlock):
                 yield Examined(
-                    _refused(shown, result.sha256, block.index, block.title, block.problem, block.findings), None
+                    _refused(shown, result.sha256, block.index, block.title, block.problem, block.findings),
+                    None,
+                    remedy_of(block.problem),
                 )
                 continue
             try:
@@ -167,10 +203,77 @@ class Examiner:
                 )
             except CoreError as error:
                 yield Examined(
-                    _refused(shown, result.sha256, block.index, block.title, error.problem, block.findings), None
+                    _refused(shown, result.sha256, block.index, block.title, error.problem, block.findings),
+                    None,
+                    remedy_of(error.problem),
                 )
                 continue
-            yield Examined(document_of(shown, result.sha256, block, analysed), analysed)
+            yield Examined(document_of(shown, result.sha256, block, analysed, self.reference_findings), analysed)
+
+
+def read_as_stated(data: bytes, options: ReadOptions) -> ReadResult:
+    """Read with the answers for axis unit and ordinate put in only where a block asks for them.
+
+    An answer that a block did not need is named in its findings: nothing a file states is overridden.
+    """
+    plain_options = replace(options, x_unit=None, ordinate=None)
+    readings = {plain_options: formats.read(data, plain_options)}
+
+    def once(chosen: ReadOptions) -> ReadResult:
+        if chosen not in readings:
+            readings[chosen] = formats.read(data, chosen)
+        return readings[chosen]
+
+    used, result = plain_options, readings[plain_options]
+    while result.problem is not None and (answered := _answered(used, result.problem, options)) is not None:
+        used, result = answered, once(answered)
+    blocks: list[SpectrumBlock | RefusedBlock] = []
+    for place, block in enumerate(result.blocks):
+        own = used
+        while isinstance(block, RefusedBlock) and (answered := _answered(own, block.problem, options)) is not None:
+            own, block = answered, once(answered).blocks[place]
+        blocks.append(_with_answers_left_over(block, own, options))
+    return replace(result, blocks=tuple(blocks))
+
+
+def _answered(used: ReadOptions, problem: Problem, options: ReadOptions) -> ReadOptions | None:
+    """`used` with the answer to the problem's question; None where there is none, or it was given already."""
+    question = problem.question
+    if question not in ("x_unit", "ordinate") or getattr(used, question) is not None:
+        return None
+    answer = getattr(options, question)
+    return None if answer is None else replace(used, **{question: answer})
+
+
+def _with_answers_left_over(
+    block: SpectrumBlock | RefusedBlock, used: ReadOptions, options: ReadOptions
+) -> SpectrumBlock | RefusedBlock:
+    if not isinstance(block, SpectrumBlock):
+        return block
+    left_over = [
+        Finding(
+            ANSWER_NOT_NEEDED,
+            Severity.WARNING,
+            f"The file states this itself as {stated!r}; the answer {getattr(options, name).value} was not applied.",
+            remedy=f"Leave {_OPTIONS[name].split(' ')[0]} out.",
+        )
+        for name, stated in (("x_unit", block.axis_unit_declared), ("ordinate", block.ordinate_declared))
+        if getattr(options, name) is not None and getattr(used, name) is None and not _same(name, options, block)
+    ]
+    return replace(block, findings=(*block.findings, *left_over)) if left_over else block
+
+
+def _same(name: str, options: ReadOptions, block: SpectrumBlock) -> bool:
+    """Whether an answer says only what the file says as well."""
+    if name == "ordinate":
+        return options.ordinate is block.ordinate_used
+    return ordinates.x_unit_named(block.axis_unit_declared) is options.x_unit
+
+
+def remedy_of(problem: Problem) -> str:
+    """What to do about a refusal, and the option that answers its question."""
+    option = _OPTIONS.get(problem.question or "")
+    return " ".join(part for part in (problem.remedy, f"Use {option}." if option else "") if part)
 
 
 def read_bytes(path: Path) -> bytes:
@@ -195,7 +298,13 @@ def read_bytes(path: Path) -> bytes:
         ) from error
 
 
-def document_of(shown: str, sha256: str, block: SpectrumBlock, analysed: AnalysisResult) -> dict[str, object]:
+def document_of(
+    shown: str,
+    sha256: str,
+    block: SpectrumBlock,
+    analysed: AnalysisResult,
+    reference_findings: Sequence[Finding] = (),
+) -> dict[str, object]:
     """The object of the module's table for one spectrum that was read."""
     body = analysed.to_json()
     document: dict[str, object] = {
@@ -206,7 +315,7 @@ def document_of(shown: str, sha256: str, block: SpectrumBlock, analysed: Analysi
         "title": block.title,
         "status": "ok",
         "problem": None,
-        "findings": _narrowed(body["findings"], _FINDING_KEYS),
+        "findings": [*_finding_rows(reference_findings), *_narrowed(body["findings"], _FINDING_KEYS)],
         "axis": body["axis"],
         "ordinate": body["ordinate"],
         "noise_absorbance": body["noise_absorbance"],
@@ -245,16 +354,20 @@ def _refused(
         "title": title,
         "status": "refused",
         "problem": {"code": problem.code, "message": problem.message, "line": problem.line},
-        "findings": [
-            {
-                "code": f.code,
-                "severity": f.severity.value,
-                "message": f.message,
-                "region_cm1": list(f.region_cm1) if f.region_cm1 else None,
-            }
-            for f in findings
-        ],
+        "findings": _finding_rows(findings),
     }
+
+
+def _finding_rows(findings: Sequence[Finding]) -> list[dict[str, object]]:
+    return [
+        {
+            "code": f.code,
+            "severity": f.severity.value,
+            "message": f.message,
+            "region_cm1": list(f.region_cm1) if f.region_cm1 else None,
+        }
+        for f in findings
+    ]
 
 
 # -- text for people ----------------------------------------------------------------------------------------------
@@ -289,9 +402,8 @@ def report_of(examined: Examined, paint: Painter) -> str:
     if document["status"] == "refused":
         problem = document["problem"]
         place = f" (line {problem['line']})" if problem["line"] else ""
-        return "\n".join(
-            [lines[0], paint(f"  REFUSED  {printable(problem['message'])}{place}  [{problem['code']}]", "bad")]
-        )
+        lines = [lines[0], paint(f"  REFUSED  {printable(problem['message'])}{place}  [{problem['code']}]", "bad")]
+        return "\n".join([*lines, f"           {printable(examined.remedy)}"] if examined.remedy else lines)
     axis, ordinate, noise = document["axis"], document["ordinate"], document["noise_absorbance"]
     lines.append(
         f"  {axis['last_cm1']:.0f} to {axis['first_cm1']:.0f} cm-1, {axis['points']} points, read as "

@@ -17,7 +17,7 @@ from spectra.core.errors import CoreError
 from spectra.core.params import MethodParams
 from spectra.core.preparation import degrade
 from spectra.core.results import Band, BandDifference, Identity, Metric, Prepared
-from spectra.core.types import Conditions, Finding, Phase, frozen_array
+from spectra.core.types import Conditions, Finding, Phase, Technique, frozen_array
 
 MASK_LIMIT_CM1 = 2000.0  # a saturated C-H stretch alone does not hinder a comparison
 
@@ -238,6 +238,19 @@ def compare(
     return _verdict(tally, metrics, float(score), reference_name, sample_conditions, reference_conditions, params), pair
 
 
+def _next_steps(conditions: Conditions) -> tuple[str, ...]:
+    """What would settle a difference. Only solids have crystal forms that a common solvent could make equal."""
+    beside = "Measure today's reference beside the sample on the same instrument."
+    if conditions.phase is Phase.SOLID or conditions.technique in (Technique.DISC, Technique.MULL, Technique.DIFFUSE):
+        return ("Repeat sample and reference from the same solvent, prepared in the same way.", beside)
+    return (
+        "Compare the label with the container that was sampled.",
+        "Measure the other containers of the delivery.",
+        "Repeat with a fresh preparation.",
+        beside,
+    )
+
+
 def _unfit(prepared: Prepared, which: str) -> list[str]:
     reasons = []
     if any(f.code == "measurement.too_noisy" for f in prepared.findings):
@@ -444,14 +457,7 @@ def _verdict(
     else:
         verdict, agrees = "not_consistent", "no"
         weight = "strong" if score < 0.4 else "good"
-    would = (
-        ()
-        if verdict == "consistent"
-        else (
-            "Repeat sample and reference from the same solvent, prepared in the same way.",
-            "Measure today's reference beside the sample on the same instrument.",
-        )
-    )
+    would = () if verdict == "consistent" else _next_steps(sample_conditions)
     return Identity(
         verdict,
         agrees,

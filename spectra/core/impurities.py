@@ -25,6 +25,10 @@ SCALE = "fraction of peak height"
 ROBUST_ROUNDS = 6
 ROBUST_LIMIT = 2.5  # standard deviations above the fit from which a point loses weight
 ONE_SIDED_95 = 1.6448536269514722
+NEGATIVE_WIDENED_Z = 2.0  # an estimate further below zero than this says that its uncertainty is too small
+NEGATIVE_REFUSED_Z = 4.0  # and further than this, that the fit does not hold for this component
+LARGEST_OVERSHOOT = 1.5  # of the sample's own height, up to which a residual band is cut to it instead of dropped
+SCALE_BAND_SHARE = 0.9  # a band of this share of the strongest one's height can stand in for it
 
 
 @dataclass(frozen=True)
@@ -107,11 +111,14 @@ def screen(
         return None, None
     fit = _Fit.of(sample, reference, pair, params)
     notes: list[str] = list(reasons)
+    scale_hidden, scale_note = _scale(sample, reference, pair, fit)
+    notes += [scale_note] if scale_note else []
+    doubtful = fit.explained_variance < params.explained_variance
     if fit.explained_variance < params.explained_variance:
         notes.append(
             f"The reference explains {100 * fit.explained_variance:.1f} % of the sample, less than "
             f"{100 * params.explained_variance:.0f} %: the declared material itself is in doubt, or another "
-            "component dominates; no impurity is named."
+            "component dominates; no impurity is named, and bands left over may belong to the material itself."
         )
     judged = [_prepare_candidate(item, sample_conditions, pair, fit, params) for item in watch]
     solved = _solve(fit, [j for j in judged if j.column is not None], params)
@@ -125,9 +132,9 @@ def screen(
         "Screening reaches roughly per cent to tenths of a per cent; it shows neither purity nor the absence of "
         "trace substances."
     )
-    refused = " ".join(notes[:-1]) if reasons or fit.explained_variance < params.explained_variance else ""
+    refused = " ".join(notes[:-1]) if reasons or doubtful or scale_hidden else ""
     screened = tuple(_judge(item, solved, smallest, refused, params) for item in judged)
-    unexplained = () if refused and reasons else _unexplained(fit, solved, smallest, params)
+    unexplained = () if reasons else _unexplained(fit, solved, smallest, params)
     residual = np.where(pair.usable, solved.residual_full, np.nan)
     return Impurities(
         screened,
@@ -137,6 +144,30 @@ def screen(
         None if refused else smallest,
         tuple(notes),
     ), (pair, residual)
+
+
+def _scale(sample: Prepared, reference: Prepared, pair: Pair, fit: _Fit) -> tuple[bool, str]:
+    """Whether total absorption hides the band that fractions are counted from, and the sentence about the scale."""
+    x, reach = pair.x_cm1, pair.resolution_cm1
+    dark = np.zeros(len(x), dtype=bool)
+    for mask in (*sample.masks, *reference.masks):
+        dark |= (x >= mask.low_cm1 - reach) & (x <= mask.high_cm1 + reach)
+    material = np.where(fit.rows | dark, pair.reference, 0.0)
+    strongest = int(np.argmax(material))
+    if fit.rows[strongest]:
+        return False, ""
+    readable = np.where(fit.rows, material, 0.0)
+    stand_in = int(np.argmax(readable))
+    if readable[stand_in] >= SCALE_BAND_SHARE * material[strongest]:
+        return False, (
+            f"The strongest band of the material (near {x[strongest]:.0f} cm-1) is totally absorbed; fractions are "
+            f"counted from the band at {x[stand_in]:.0f} cm-1, which can be read."
+        )
+    return True, (
+        f"The strongest band of the material (near {x[strongest]:.0f} cm-1) is totally absorbed in the sample or in "
+        "its reference, so the height that fractions are counted from is unknown: measure a thinner or more dilute "
+        "specimen."
+    )
 
 
 @dataclass
@@ -346,7 +377,21 @@ def _judge(item: _Judged, solved: _Solved, smallest: float, refused: str, params
         return unseen(item.reason)
     if refused:
         return unseen(refused)
-    sigma = solved.sigmas[name]
+    estimate, sigma = solved.estimates[name], solved.sigmas[name]
+    z = estimate / sigma
+    if z <= -NEGATIVE_REFUSED_Z:
+        return unseen(
+            f"The fit gives a negative amount ({100 * estimate:.2f} % of the peak height, {-z:.1f} standard "
+            "uncertainties below zero): sample and reference differ in a way that the fit does not know, and no "
+            "absence can be read from it."
+        )
+    widened = ""
+    if z < -NEGATIVE_WIDENED_Z:
+        widened = (
+            f"The estimate lies {-z:.1f} standard uncertainties of {100 * sigma:.2f} % below zero, where no amount "
+            "can lie; uncertainty and limits are widened accordingly."
+        )
+        sigma = -estimate / NEGATIVE_WIDENED_Z
     limits = currie_limits(sigma, params.impurity_significance)
     decision = max(limits.decision, smallest)
     detection = max(limits.detection, smallest + ONE_SIDED_95 * sigma)
@@ -355,7 +400,6 @@ def _judge(item: _Judged, solved: _Solved, smallest: float, refused: str, params
             f"Its signal disappears under this material: it would be seen only from {100 * detection:.0f} % of "
             "the peak height upwards."
         )
-    estimate = solved.estimates[name]
     z = estimate / sigma
     facts = (
         f"Estimate {100 * estimate:.2f} % of the peak height, standard uncertainty {100 * sigma:.2f} %, "
@@ -393,13 +437,17 @@ def _judge(item: _Judged, solved: _Solved, smallest: float, refused: str, params
         SCALE,
         "good",
         (),
-        (facts, bounds),
+        (*([widened] if widened else []), facts, bounds),
         (),
     )
 
 
 def _unexplained(fit: _Fit, solved: _Solved, smallest: float, params: MethodParams) -> tuple[Unexplained, ...]:
-    """Positive residual bands that stand out of the local uncertainty and of the smallest claim."""
+    """Positive residual bands that stand out of the local uncertainty and of the smallest claim.
+
+    What is left over can never be more than the sample itself absorbs at that place: a little more is cut to it, much
+    more is the fit's own doing, where the reference had to be taken negatively, and no band.
+    """
     from scipy.signal import find_peaks
 
     x = fit.pair.x_cm1
@@ -412,7 +460,10 @@ def _unexplained(fit: _Fit, solved: _Solved, smallest: float, params: MethodPara
     result = []
     quiet = np.convolve(~fit.rows, np.ones(2 * int(fit.pair.resolution_cm1 / step) + 1), mode="same") > 0
     for index, prominence in zip(peaks, facts["prominences"], strict=True):
-        height = float(trace[index])
+        own = float(fit.pair.sample[index])
+        if trace[index] > LARGEST_OVERSHOOT * own:
+            continue
+        height = min(float(trace[index]), own)
         ratio = min(height, float(prominence)) / float(local[index])
         inside_co2 = atmosphere.CO2_REGION_CM1[0] < x[index] < atmosphere.CO2_REGION_CM1[1]
         if quiet[index] or inside_co2 or ratio < params.unexplained_significance or height < floor:

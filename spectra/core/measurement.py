@@ -6,13 +6,13 @@ taken before any smoothing.
 
 from __future__ import annotations
 
-import re
 from dataclasses import dataclass
 
 import numpy as np
 
 from spectra.core import atmosphere
 from spectra.core.errors import CoreError
+from spectra.core.formats.stated import resolution_named
 from spectra.core.params import MethodParams
 from spectra.core.types import Conditions, Finding, Ordinate, Phase, Severity, SpectrumBlock, Technique
 
@@ -58,12 +58,7 @@ def stated_resolution_cm1(block: SpectrumBlock, conditions: Conditions) -> float
     """Resolution from the conditions, else from the file's header, else None."""
     if conditions.resolution_cm1:
         return float(conditions.resolution_cm1)
-    match = re.match(r"\s*(\d+(?:\.\d*)?|\.\d+)", str(block.headers.get("RESOLUTION", "")))
-    if match:
-        value = float(match.group(1))
-        if 0.01 <= value <= 64:
-            return value
-    return None
+    return resolution_named(str(block.headers.get("RESOLUTION", "")))
 
 
 def to_absorbance(block: SpectrumBlock, conditions: Conditions, params: MethodParams) -> Absorbance:

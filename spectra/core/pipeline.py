@@ -37,6 +37,12 @@ from spectra.core.results import (
 from spectra.core.types import Conditions, Finding, Severity, SpectrumBlock, Technique
 from spectra.core.version import CORE_VERSION, RESULT_SCHEMA
 
+# Where the water of a moist salt disc absorbs: its O-H stretch and its bend.
+WET_REGIONS = (
+    Mask(1600.0, 1660.0, "moist salt disc: left out of the groups"),
+    Mask(3100.0, 3700.0, "moist salt disc: left out of the groups"),
+)
+
 Progress = Callable[[str, float], None]
 
 
@@ -76,7 +82,9 @@ def analyse(
     prepared = prepare(block, conditions, params)
     stage("bands", 0.3)
     bands = band_picking.pick(prepared, params, conditions.phase)
-    findings = [*prepared.findings, *_wet_matrix(bands, conditions)]
+    wet = _wet_matrix(bands, conditions)
+    findings = [*prepared.findings, *wet]
+    unreadable = WET_REGIONS if wet else ()
     stage("groups", 0.45)
     declared = _declared(declared_structure, expected_groups)
     weighing = weigh_groups(
@@ -88,6 +96,7 @@ def analyse(
         expected=declared,
         forbidden=forbidden_groups,
         tolerated=structures.tolerated_groups(declared) if declared else (),
+        unreadable=unreadable,
     )
     findings += weighing.findings
     bands = tuple(replace(band, used_by=weighing.used_by.get(band, ())) for band in bands)
@@ -98,7 +107,7 @@ def analyse(
     )
     findings += reference_findings
     stage("result", 0.95)
-    masks = _masks(prepared, identity is not None)
+    masks = _masks(prepared, identity is not None, unreadable)
     body = _body(
         block,
         conditions,
@@ -163,8 +172,8 @@ def _wet_matrix(bands: tuple[Band, ...], conditions: Conditions) -> list[Finding
             "measurement.wet_matrix",
             Severity.WARNING,
             f"A broad band at {stretch[0].position_cm1:.0f} cm-1 together with {bend[0].position_cm1:.0f} cm-1 is "
-            "what a moist salt disc shows; O-H and N-H cannot be judged from it.",
-            region_cm1=(3200.0, 3600.0),
+            "what a moist salt disc shows; O-H and N-H (3100-3700 and 1600-1660 cm-1) are not read for the groups.",
+            region_cm1=(3100.0, 3700.0),
             remedy="Dry the salt and the specimen, press again, or use a mull.",
         )
     ]
@@ -213,6 +222,8 @@ def _against_reference(
     screened, laid = impurity_screening.screen(
         prepared, conditions, other, reference.conditions, tuple(candidates), params
     )
+    if screened is not None:
+        compared, screened = _in_agreement(compared, screened, params)
     curves: dict[str, np.ndarray] = {}
     if pair is not None:
         curves["reference"] = _onto(prepared.x_cm1, pair.x_cm1, pair.reference)
@@ -220,6 +231,36 @@ def _against_reference(
         curves["reference"] = _onto(prepared.x_cm1, laid[0].x_cm1, laid[0].reference)
         curves["residual"] = _onto(prepared.x_cm1, laid[0].x_cm1, laid[1])
     return compared, screened, curves, findings
+
+
+def _in_agreement(compared: Identity, screened: Impurities, params: MethodParams) -> tuple[Identity, Impurities]:
+    """Identity and screening judge one fit, so neither may say good where the other says that something is wrong."""
+    if compared.verdict == "consistent" and screened.explained_variance < params.explained_variance:
+        doubt = (
+            f"The bands agree, but the reference explains only {100 * screened.explained_variance:.1f} % of the sample "
+            f"as a whole, less than {100 * params.explained_variance:.0f} %: something else absorbs beside it, or the "
+            "measurement is at fault."
+        )
+        compared = replace(
+            compared,
+            verdict="consistent_with_differences",
+            agrees="neutral",
+            weight="open",
+            against=(*compared.against, doubt),
+            would_decide=("See to the findings of the measurement and record the sample again.",),
+        )
+    if compared.verdict == "not_consistent":
+        doubt = "The sample is not consistent with the declared material, so an absence carries little here."
+        screened = replace(
+            screened,
+            screened=tuple(
+                replace(item, agrees="neutral", weight="open", against=(*item.against, doubt))
+                if item.verdict == "not_found_above_limit"
+                else item
+                for item in screened.screened
+            ),
+        )
+    return compared, screened
 
 
 def _onto(grid: np.ndarray, x: np.ndarray, values: np.ndarray) -> np.ndarray:
@@ -235,8 +276,8 @@ def _own_curves(prepared: Prepared) -> dict[str, np.ndarray]:
     }
 
 
-def _masks(prepared: Prepared, compared: bool) -> list[Mask]:
-    masks = list(prepared.masks)
+def _masks(prepared: Prepared, compared: bool, unreadable: tuple[Mask, ...]) -> list[Mask]:
+    masks = [*prepared.masks, *unreadable]
     low, high = CO2_REGION_CM1
     if compared and prepared.x_cm1[0] < low and prepared.x_cm1[-1] > high:
         masks.append(Mask(low, high, "carbon dioxide of the air: left out of identity and impurity figures"))

@@ -165,23 +165,7 @@ def prepare(block: SpectrumBlock, conditions: Conditions, params: MethodParams) 
     readable = np.where(usable, smooth, 0.0)
     top = int(np.argmax(readable))
     findings += measurement.strength_findings(float(readable[top]), float(grid[top]), noise, recorded.relative, params)
-    if noise > 0:
-        loudest = sorted(windows, key=lambda w: -w[2])[:1]
-        findings.append(
-            Finding(
-                "measurement.noise",
-                Severity.INFO,
-                f"Noise is {noise:.2g} absorbance before any smoothing"
-                + (
-                    f"; the most restless window ({loudest[0][0]:.0f}-{loudest[0][1]:.0f} cm-1) "
-                    f"reads {loudest[0][2]:.2g}."
-                    if loudest
-                    else "."
-                ),
-                facts={"noise_absorbance": noise},
-            )
-        )
-    else:
+    if noise <= 0:
         findings.append(
             Finding(
                 "measurement.noise_unknown",

@@ -1,4 +1,4 @@
 """The version of the numeric core: raised whenever a computed number can move."""
 
-CORE_VERSION = "1.0.0"
+CORE_VERSION = "1.1.0"
 RESULT_SCHEMA = 1

@@ -2,12 +2,14 @@
 
 import hashlib
 import json
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 import rfc8785
 
+from spectra.core import pipeline
 from spectra.core.errors import CoreError
 from spectra.core.group_table import load
 from spectra.core.params import MethodParams

@@ -234,7 +234,9 @@ def test_exchanged_ends_of_pairs_are_said():
     assert "reader.ends_exchanged" in {finding.code for finding in block.findings}
 
 
-@pytest.mark.parametrize(("declared", "severity"), [("##MAXY=95\n", "info"), ("##MAXY=0.95\n", "warning"), ("", "warning")])
+@pytest.mark.parametrize(
+    ("declared", "severity"), [("##MAXY=95\n", "info"), ("##MAXY=0.95\n", "warning"), ("", "warning")]
+)
 def test_percent_that_the_header_confirms_is_only_mentioned(declared, severity):
     block = only(document(y_units="TRANSMITTANCE", y=100 * FRACTION, extra=declared))
     (finding,) = [finding for finding in block.findings if finding.code == "reader.values_in_percent"]

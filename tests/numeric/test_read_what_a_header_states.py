@@ -47,7 +47,9 @@ def test_a_resolution_of_nothing_or_in_another_unit_is_none(text):
     [("5 CM", 5.0), ("18 CM CELL", 18.0), ("0.1 mm", 0.01), ("25 um", 0.0025), ("10", None), ("long", None)],
 )
 def test_a_path_needs_its_unit(text, length_cm):
-    assert stated({"PATHLENGTH": text})["path_length_cm"] == (length_cm if length_cm is None else pytest.approx(length_cm))
+    assert stated({"PATHLENGTH": text})["path_length_cm"] == (
+        length_cm if length_cm is None else pytest.approx(length_cm)
+    )
 
 
 def test_the_date_is_handed_on_in_the_words_of_the_file():

@@ -23,6 +23,8 @@ FEWEST_LINES_FOR_A_DRIFT = 6
 LARGEST_SLACK_STEPS = 0.3  # what the rounding of FIRSTX and LASTX may excuse
 COARSEST_UNIT_STEPS = 0.5  # labels printed more coarsely cannot tell a drift or a truncation from exchanged lines
 UNHEEDED_STEPS = 0.05  # writers reckon their abscissae in single precision; a lost point moves a line by a whole step
+DELTAX_UNITS = 1.5  # of its last written figure: found rounded, truncated, and reckoned from rounded ends
+SINGLE_PRECISION = 2.0**-22  # what a spacing loses that was reckoned or subtracted in single precision
 UNEVEN_SHARE = 0.05  # spacings that differ by less than this share of their median are even
 REMEDY_EXPORT = "Export the spectrum again from the instrument; do not edit the file."
 
@@ -198,13 +200,15 @@ def _spacing_finding(block: Block, x: np.ndarray) -> list[Finding]:
         return findings
     spacing = float(x[-1] - x[0]) / (len(x) - 1)
     error = abs(number.value - spacing)
-    if error > number.unit + 1e-9 * abs(spacing):
+    ends = [end.unit for label in ("FIRSTX", "LASTX") if (end := _optional(block, label, [])) is not None]
+    rounding = 0.5 * sum(ends) / (len(x) - 1)
+    if error > DELTAX_UNITS * number.unit + rounding + SINGLE_PRECISION * abs(spacing):
         findings.append(
             _differs(
                 "DELTAX",
                 number,
                 spacing,
-                f"DELTAX is declared as {number.text}; FIRSTX, LASTX and the points give {spacing:.8g}.",
+                f"DELTAX is declared as {number.text}; FIRSTX, LASTX and the points give {spacing:.10g}.",
             )
         )
     elif error * (len(x) - 1) > 0.5 * abs(spacing):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from dataclasses import replace
 
 import numpy as np
 
@@ -73,7 +74,8 @@ def _read_block(block: Block, index: int, options: ReadOptions, points_left: int
         raise CoreError(
             "reader.number_too_large", "YFACTOR makes the ordinates too large.", line=block.line_of("YFACTOR")
         )
-    findings.extend(axis.declaration_findings(block, placed.x, y_raw, y_factor))
+    against_header = axis.declaration_findings(block, placed.x, y_raw, y_factor)
+    findings.extend(against_header)
 
     x_cm1, y = _ascending_cm1(placed.x, y, unit, record.line)
     ordinates.check_axis_unit(x_cm1, block.text("XUNITS"), unit_answered, block.line_of("XUNITS"))
@@ -82,7 +84,7 @@ def _read_block(block: Block, index: int, options: ReadOptions, points_left: int
     used, y, more = ordinates.settle_ordinate(
         y, declared, ordinates.ordinate_named(declared), options, technique, block.line_of("YUNITS")
     )
-    findings.extend(more)
+    findings.extend(_confirmed_by_header(more, block, against_header))
     x_cm1, y = checks.as_trace(x_cm1, y)
     return SpectrumBlock(
         index=index,
@@ -98,6 +100,16 @@ def _read_block(block: Block, index: int, options: ReadOptions, points_left: int
         headers=block.headers(),
         findings=tuple(findings),
     )
+
+
+def _confirmed_by_header(found: list[Finding], block: Block, against_header: list[Finding]) -> list[Finding]:
+    """Percent under a word for fractions is worth a mention only where FIRSTY, MINY and MAXY count in percent, too."""
+    declared = {label for label in ("FIRSTY", "MINY", "MAXY") if block.text(label)}
+    if not declared or declared & {str(item.facts.get("label")) for item in against_header}:
+        return found
+    return [
+        replace(item, severity=Severity.INFO) if item.code == "reader.values_in_percent" else item for item in found
+    ]
 
 
 def _refuse_other_techniques(block: Block, findings: list[Finding]) -> None:

@@ -28,12 +28,15 @@ LEVEL_CHANCES = {
     "v": (0.25, 0.20, 0.22, 0.18, 0.15),
 }
 ABSENCE_WEIGHT = {"counts": 1.0, "little": 0.5, "nothing": 0.0}
-LEVEL_NAMES = ("none", "very weak", "weak", "medium", "strong")
+TABLE_LEVELS = {"vw": 1, "w": 2, "m": 3, "s": 4, "vs": 4}  # the band table's letters on the scale of the levels
 CREDIBLE_MEMBERSHIP = 0.25
 SERIES_LINE_WIDTH_CM1 = 13.0
 SERIES_GAP_CM1 = 36.0
 SERIES_LEAST = 5
 LARGEST_EXPLANATION = 0.97
+EDGE_SLACK_CM1 = 6.0  # a band further outside of a window than this is none of its bands
+LEAST_SIZE_CHANCE = 0.10  # a band so large that a row shows one like it more rarely than this is none of its bands
+WEAK_ROWS = ("vw", "w", "w-m")
 
 
 @dataclass(frozen=True)
@@ -62,6 +65,7 @@ class Reading:
     credibility: float
     penalty: float  # natural logarithm, zero or below: what the shortfall says against the group
     by_shoulder: bool = False
+    too_strong: Band | None = None  # the band that lies here and is larger than this row allows
 
 
 @dataclass(frozen=True)
@@ -75,6 +79,7 @@ class Scene:
     phases: tuple[bool, ...]  # which window sets apply: False condensed, True gas
     widening_cm1: float
     prepared: Prepared
+    depth_scaled: bool = False  # heights were scaled to one penetration depth before they were ranked
 
     @property
     def saturated(self) -> bool:
@@ -160,6 +165,7 @@ def scene_of(prepared: Prepared, bands: tuple[Band, ...], conditions: Conditions
         phases,
         params.unknown_phase_widening_cm1 if len(phases) > 1 else 0.0,
         prepared,
+        conditions.technique is Technique.ATR,
     )
 
 
@@ -195,10 +201,12 @@ def windows_of(row: BandRow, scene: Scene) -> tuple[tuple[float, float], ...]:
 
 
 def membership(position: float, windows: tuple[tuple[float, float], ...], softness: float) -> float:
-    """1 inside a window, falling softly outside."""
+    """1 inside a window, falling softly outside, and 0 further outside than EDGE_SLACK_CM1."""
     best = 0.0
     for low, high in windows:
         outside = max(low - position, position - high, 0.0)
+        if outside > EDGE_SLACK_CM1:
+            continue
         best = max(best, math.exp(-0.5 * (outside / (0.5 * softness)) ** 2))
     return best
 
@@ -239,13 +247,25 @@ def explanation(
         )
     if place < 0.05:
         return 0.0
-    chances = LEVEL_CHANCES[row.strength]
-    at_least = sum(chances[cluster.level :])
+    if not scene.saturated and exceeds(row, cluster.level):
+        return 0.0
+    at_least = sum(LEVEL_CHANCES[row.strength][cluster.level :])
     size = min(1.0, 0.05 + 2.2 * at_least)
     if scene.saturated:
         # The true height of the strongest band is unknown, so every share is too large and speaks against nothing.
         size = max(size, 0.8)
     return min(LARGEST_EXPLANATION, place * _width_fit(cluster.fwhm_cm1, _widths(row, scene)) * size)
+
+
+def exceeds(row: BandRow, level: int) -> bool:
+    """Whether a band of this level is larger than the row's own band ever is, so that it must come from something else.
+
+    Diagnostic and companion bands that range from weak to medium are spared: in a small molecule one of them may well
+    be the strongest band there is.
+    """
+    if row.strength not in WEAK_ROWS or (row.strength == "w-m" and row.role != "supporting"):
+        return False
+    return sum(LEVEL_CHANCES[row.strength][level:]) < LEAST_SIZE_CHANCE
 
 
 def plateau_cluster(scene: Scene, params: MethodParams) -> Cluster | None:
@@ -297,6 +317,7 @@ def read_row(row: BandRow, scene: Scene, params: MethodParams) -> Reading:
         )
     best_share, best, credible = 0.0, None, 0.0
     hits: list[Band] = []
+    too_strong: Band | None = None
     for cluster in scene.clusters:
         # Only the centre of a series of lines says where the vibration lies, so no single line of it fills a window.
         if cluster.series and membership(cluster.position_cm1, windows, params.edge_softness_cm1) < CREDIBLE_MEMBERSHIP:
@@ -308,8 +329,13 @@ def read_row(row: BandRow, scene: Scene, params: MethodParams) -> Reading:
             fit = place * _width_fit(band.fwhm_cm1, widths)
             if fit < CREDIBLE_MEMBERSHIP:
                 continue
-            hits.append(band)
             share = cluster.share * _size(band) / max(_size(max(cluster.members, key=_size)), 1e-12)
+            # The word of the band table counts as well, so that no sentence calls a strong band a weak row's own.
+            if exceeds(row, max(level_of(share, params), TABLE_LEVELS[band.intensity])):
+                if too_strong is None or band.height_absorbance > too_strong.height_absorbance:
+                    too_strong = band
+                continue
+            hits.append(band)
             if share * fit > best_share * max(credible, 1e-9):
                 best_share, best, credible = share, band, fit
     by_shoulder = False
@@ -317,11 +343,16 @@ def read_row(row: BandRow, scene: Scene, params: MethodParams) -> Reading:
         for band in scene.bands:
             if band.kind == "shoulder" and membership(band.position_cm1, windows, params.edge_softness_cm1) > 0.8:
                 share = 0.5 * band.height_absorbance / scene.strongest if scene.strongest > 0 else 0.0
+                if exceeds(row, TABLE_LEVELS[band.intensity]):
+                    continue
                 if share > best_share:
                     best_share, best, credible, by_shoulder = share, band, 0.5, True
         if best is not None:
             hits = [best]
     readable = readable_share(windows, scene.prepared)
+    if best is None and too_strong is not None:
+        # Beneath a band that belongs to something else the row's own weak band can be neither seen nor missed.
+        return Reading(row, windows, "not_readable", 0, 0.0, (), 0.0, 0.0, too_strong=too_strong)
     if best is None:
         if readable < 0.6 or scene.strongest <= 0:
             return Reading(row, windows, "not_readable", 0, 0.0, (), 0.0, 0.0)

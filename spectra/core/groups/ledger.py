@@ -12,11 +12,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from spectra.core.group_table import Group, GroupTable
-from spectra.core.groups.features import LEVEL_CHANCES, LEVEL_NAMES, Reading, Scene, phases_of, scene_of
+from spectra.core.groups.features import EDGE_SLACK_CM1, LEVEL_CHANCES, Reading, Scene, phases_of, scene_of
 from spectra.core.groups.joint import DOMINANT_SHARE, Posterior, weigh
+from spectra.core.groups.sentences import sentence_of, weaker_than_usual
 from spectra.core.groups.substitution import substitution_note
 from spectra.core.params import MethodParams
-from spectra.core.results import Band, GroupClaim, Lane, LaneWindow, Prepared
+from spectra.core.results import Band, GroupClaim, Lane, LaneWindow, Mask, Prepared
 from spectra.core.types import Conditions, Finding, Severity
 
 FINGERPRINT_CM1 = 1500.0
@@ -24,7 +25,8 @@ LEAST_USUAL_CHANCE = 0.19
 LEAST_PATTERN_CHANCE = 0.30
 LACKING_PENALTY = -1.5
 MANIFOLD_SHORTFALL = -4.0  # several bands too weak or missing at once
-LIKELY_MEMBER = 0.6
+LIKELY_MEMBER = 0.77
+MEDIUM = 3  # level from which a diagnostic band can carry the weight "strong"
 
 
 @dataclass(frozen=True)
@@ -48,12 +50,15 @@ def weigh_groups(
     expected: Iterable[str] | None = None,
     forbidden: Iterable[str] = (),
     tolerated: Iterable[str] = (),
+    unreadable: tuple[Mask, ...] = (),
 ) -> GroupWeighing:
     """Verdict, ledger and lane of every group of the table.
 
     expected : groups that the declaration has (None: nothing is declared); forbidden : groups it must not have;
-    tolerated : groups that may be there or not without contradicting the declaration.
+    tolerated : groups that may be there or not without contradicting the declaration; unreadable : regions in which
+    the bands are not the sample's own (a moist matrix): neither their bands nor their absences count.
     """
+    prepared, bands = _without(prepared, bands, unreadable)
     declared = None if expected is None else frozenset(expected)
     barred, spared = frozenset(forbidden), frozenset(tolerated)
     scene = scene_of(prepared, bands, conditions, params)
@@ -118,6 +123,20 @@ def weigh_groups(
     )
 
 
+def _without(
+    prepared: Prepared, bands: tuple[Band, ...], unreadable: tuple[Mask, ...]
+) -> tuple[Prepared, tuple[Band, ...]]:
+    """The spectrum as the groups may read it: nothing of what lies in an unreadable region."""
+    if not unreadable:
+        return prepared, bands
+    x, usable = prepared.x_cm1, prepared.usable.copy()
+    for mask in unreadable:
+        usable &= ~((x >= mask.low_cm1) & (x <= mask.high_cm1))
+    usable.setflags(write=False)
+    kept = tuple(b for b in bands if not any(m.low_cm1 <= b.position_cm1 <= m.high_cm1 for m in unreadable))
+    return replace(prepared, usable=usable), kept
+
+
 def agreement(identifier: str, verdict: str, declared: frozenset[str] | None, barred: frozenset[str]) -> str:
     """yes, no or neutral: whether the verdict fits what was declared."""
     if verdict not in ("supported", "contradicted"):
@@ -129,50 +148,18 @@ def agreement(identifier: str, verdict: str, declared: frozenset[str] | None, ba
     return "yes" if (identifier in declared) == (verdict == "supported") else "no"
 
 
-def weight_in_words(verdict: str, chance: float) -> str:
-    """The weight of a verdict in plain words; it is not calibrated and therefore no number."""
+def weight_in_words(verdict: str, chance: float, weak_evidence: bool = False) -> str:
+    """The weight of a verdict in plain words; it is not calibrated and therefore no number.
+
+    weak_evidence : no diagnostic band reaches medium size, so that nothing beside it makes the verdict strong.
+    """
     if verdict == "not_examined":
         return "cannot be weighed"
     if verdict == "supported":
-        return "strong" if chance >= 0.98 else "good"
+        return "strong" if chance >= 0.98 and not weak_evidence else "good"
     if verdict == "contradicted":
         return "strong" if chance <= 0.005 else "good"
     return "leans towards it" if chance >= 0.6 else "leans against it" if chance <= 0.15 else "open"
-
-
-def _sentence(reading: Reading) -> str:
-    where = " or ".join(f"{low:.0f}-{high:.0f} cm-1" for low, high in reading.windows)
-    row = reading.row
-    if reading.state == "not_readable":
-        return f"{row.name}: {where or 'no window in this phase'} cannot be read."
-    if reading.state == "missing":
-        return f"{row.name}: nothing in {where}, where a band is usually {_strength_word(row.strength)}."
-    if row.kind == "plateau":
-        return f"{row.name}: a very broad absorption across {where}, {100 * reading.share:.0f} % of the strongest band."
-    strongest = max(reading.bands, key=lambda b: min(b.height_absorbance, 3 * b.prominence_absorbance))
-    extra = f" and {len(reading.bands) - 1} more" if len(reading.bands) > 1 else ""
-    doubt = (
-        " Only a shoulder, so it counts little."
-        if reading.by_shoulder
-        else (" It is saturated: present, but its size is unknown." if strongest.kind == "saturated" else "")
-    )
-    return (
-        f"{row.name}: band at {strongest.position_cm1:.1f} cm-1 ({LEVEL_NAMES[reading.level]}, {strongest.shape}, "
-        f"{strongest.height_absorbance:.3f} absorbance){extra}, window {where}.{doubt}"
-    )
-
-
-def _strength_word(strength: str) -> str:
-    return {
-        "s": "strong",
-        "m-s": "medium to strong",
-        "m": "medium",
-        "w-s": "weak to strong",
-        "w-m": "weak to medium",
-        "w": "weak",
-        "vw": "very weak",
-        "v": "of varying strength",
-    }[strength]
 
 
 def usual_enough(reading: Reading, least: float = LEAST_USUAL_CHANCE) -> bool:
@@ -252,15 +239,19 @@ def _judge(
     found, readable = _sets_found(readings, "diagnostic")
     companions_found, companions_readable = _sets_found(readings, "companion")
     against = [
-        _sentence(r)
+        sentence_of(r)
         for r in here
         if r.state == "missing" and r.row.absence != "nothing" and not _covered_by_set(r, readings)
     ]
-    for_ = [_sentence(r) for r in here if r.state == "found"]
-    unread = [_sentence(r) for r in here if r.state == "not_readable"]
+    for_ = [sentence_of(r) for r in here if r.state == "found"]
+    unread = [
+        sentence_of(r)
+        for r in here
+        if r.state == "not_readable" and not (r.too_strong is not None and r.row.role == "supporting")
+    ]
     rivals = _rivals(group, index, posterior, table)
     weak_found = [r for r in diagnostic if r.state == "found" and r.penalty < -1.0]
-    against += [f"{r.row.name}: the band is weaker than usual for this group." for r in weak_found]
+    against += [weaker_than_usual(r, scene) for r in weak_found]
     if rivals:
         against.append(f"Its bands are accounted for as well by: {', '.join(rivals)}.")
     for need in group.needs:
@@ -325,7 +316,11 @@ def _judge(
         group.name,
         verdict,
         None,
-        weight_in_words(verdict, chance),
+        weight_in_words(
+            verdict,
+            chance,
+            not any(r.level >= MEDIUM or any(b.kind == "saturated" for b in r.bands) for r in diagnostic),
+        ),
         agreement(group.id, verdict, declared, barred),
         tuple(for_),
         tuple(against),
@@ -391,7 +386,9 @@ def _lane(group: Group, readings: tuple[Reading, ...], verdict: str) -> Lane:
     windows = []
     for reading in readings:
         for low, high in reading.windows:
-            inside = tuple(b.position_cm1 for b in reading.bands if low - 15 <= b.position_cm1 <= high + 15)
+            inside = tuple(
+                b.position_cm1 for b in reading.bands if low - EDGE_SLACK_CM1 <= b.position_cm1 <= high + EDGE_SLACK_CM1
+            )
             state = reading.state if reading.state != "found" or inside or reading.row.kind == "plateau" else "missing"
             windows.append(LaneWindow(low, high, reading.row.name, reading.row.role, state, inside))
     return Lane(group.id, group.name, verdict, tuple(windows))
@@ -418,11 +415,11 @@ def _class_claim(
     likely = sorted(
         (m for m in members if m in posterior.ids), key=lambda m: -posterior.probability[posterior.ids.index(m)]
     )[:3]
-    for_, against = [], []
+    for_, state = [], ["Wider class."]
     if supported:
         for_.append(f"Supported among its members: {', '.join(supported)}.")
     if shut:
-        against.append(f"Contradicted: {', '.join(names[m] for m in shut)}.")
+        state.append(f"Members ruled out: {', '.join(names[m] for m in shut)}.")
     if supported:
         verdict, chance = "supported", max(chance, params.class_probability)
     elif chance >= params.class_probability and _member_seen(likely, posterior):
@@ -439,8 +436,9 @@ def _class_claim(
         verdict = "contradicted"
     else:
         verdict = "undecided"
-    if open_ and verdict != "contradicted":
-        against.append(f"Undecided: {', '.join(names[m] for m in open_)}.")
+    if open_:
+        state.append(f"Members still open: {', '.join(names[m] for m in open_)}.")
+    against = ("Every member that could be examined is ruled out or unlikely.",) if verdict == "contradicted" else ()
     wanted = None if declared is None else (declared | {identifier} if declared & set(members) else declared)
     return GroupClaim(
         identifier,
@@ -450,10 +448,10 @@ def _class_claim(
         weight_in_words(verdict, chance),
         agreement(identifier, verdict, wanted, barred),
         tuple(for_),
-        tuple(against),
+        against,
         () if verdict in ("supported", "contradicted") else would,
         None,
-        "Wider class.",
+        " ".join(state),
         members,
     )
 
