@@ -47,6 +47,8 @@ USAGE = """Bandledger's own commands:
   start      prepare everything and serve the demonstration laboratory (start --help for options)
   test       run the whole test suite (arguments go to pytest)
   examine    read spectrum files from the shell, outside the record
+Any command but start works on your own laboratory; with --demo it works on the demonstration, for example:
+  verify_trail --demo
 All others:
 """
 
@@ -104,8 +106,43 @@ def run_here(arguments: list[str]) -> int:
 
     if arguments in ([], ["help"], ["--help"]):
         print(USAGE, flush=True)
-    execute_from_command_line([str(ROOT / "manage.py"), *arguments])
+    if "--demo" in arguments[1:]:
+        arguments = [argument for argument in arguments if argument != "--demo"]
+        os.environ["BANDLEDGER_DEMO"] = "1"  # before the settings are read
+    try:
+        execute_from_command_line([str(ROOT / "manage.py"), *arguments])
+    except Exception as error:
+        if reason := database_refusal(error, arguments[0]):
+            raise Refusal(reason) from None
+        raise
     return 0
+
+
+def database_refusal(error: Exception, command: str) -> str | None:
+    """What to tell instead of `error` when it comes from a database that no laboratory, or an older one, is in."""
+    from django.db import DatabaseError, OperationalError, connection
+    from django.db.migrations.executor import MigrationExecutor
+
+    from labsite import settings
+
+    if not isinstance(error, DatabaseError):
+        return None
+    where = connection.settings_dict["NAME"]
+    try:
+        executor = MigrationExecutor(connection)
+        waiting = executor.migration_plan(executor.loader.graph.leaf_nodes())
+    except OperationalError as problem:
+        return f"The database {where} cannot be used: {str(problem).strip().splitlines()[0]}"
+    if not waiting:
+        return None
+    if executor.loader.applied_migrations:
+        return f"The database {where} belongs to an older version: stop Bandledger and run python3 manage.py migrate."
+    if settings.DEMO:
+        return f"There is no demonstration laboratory at {where} yet: python3 manage.py start makes it."
+    return (
+        f"There is no laboratory at {where} yet: python3 manage.py start --own sets it up. "
+        f"For the demonstration: python3 manage.py {command} --demo"
+    )
 
 
 # -- the stamp --------------------------------------------------------------------------------------------------

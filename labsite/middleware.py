@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import secrets
-from collections.abc import Callable
+from collections.abc import Callable, Iterable, Iterator
 
 from axes.helpers import get_client_ip_address
 from django.conf import settings
@@ -12,7 +12,7 @@ from django.http import HttpRequest, HttpResponse
 from . import policy
 from .answers import refusal
 from .errors import BadInput, DomainError
-from .trail import context
+from .trail import canonical, context
 
 GetResponse = Callable[[HttpRequest], HttpResponse]
 BYTES_WITHOUT_SESSION = 1024 * 1024
@@ -75,6 +75,43 @@ class UploadGate:
             )
             return refusal(request, error, status=TOO_LARGE)
         return self.get_response(request)
+
+
+class StorableText:
+    """Refuses text that no database of ours can hold: NUL, and halves of a surrogate pair.
+
+    What comes with every request is looked at before the session is read; the form only after the forgery check has
+    had its turn, because reading it takes the whole body in.
+    """
+
+    def __init__(self, get_response: GetResponse):
+        self.get_response = get_response
+
+    def __call__(self, request: HttpRequest) -> HttpResponse:
+        if not canonical.storable(request.path_info, *_texts(request.GET.lists()), *_texts(request.COOKIES.items())):
+            return self._refuse(request)
+        return self.get_response(request)
+
+    def process_view(
+        self, request: HttpRequest, view: Callable, view_args: tuple, view_kwargs: dict
+    ) -> HttpResponse | None:
+        if request.method == "POST" and not canonical.storable(*_texts(request.POST.lists())):
+            return self._refuse(request)
+        return None
+
+    def _refuse(self, request: HttpRequest) -> HttpResponse:
+        error = BadInput(
+            "request.control_character",
+            "A character that cannot be stored was sent.",
+            remedy="Go back and type the text anew instead of pasting it.",
+        )
+        return refusal(request, error)
+
+
+def _texts(pairs: Iterable[tuple[str, str | list[str]]]) -> Iterator[str]:
+    for name, value in pairs:
+        yield name
+        yield from [value] if isinstance(value, str) else value
 
 
 class DomainErrors:

@@ -138,6 +138,7 @@ MIDDLEWARE = [
     "django.contrib.sessions.middleware.SessionMiddleware",
     "django.middleware.common.CommonMiddleware",
     "django.middleware.csrf.CsrfViewMiddleware",
+    "labsite.middleware.StorableText",
     "django.contrib.auth.middleware.AuthenticationMiddleware",
     "labsite.accounts.middleware.SessionLimits",
     "labsite.accounts.middleware.SignInRequired",
@@ -183,6 +184,7 @@ AUTH_PASSWORD_VALIDATORS = [
         "NAME": "django.contrib.auth.password_validation.UserAttributeSimilarityValidator",
         "OPTIONS": {"user_attributes": ("username", "printed_name"), "max_similarity": 0.7},
     },
+    {"NAME": "labsite.accounts.passwords.RepeatedWordValidator"},
 ]
 AXES_FAILURE_LIMIT = env_int("BANDLEDGER_SIGN_IN_FAILURES", 5)
 AXES_COOLOFF_TIME = env_int("BANDLEDGER_LOCK_OUT_MINUTES", 15) / 60
@@ -214,7 +216,7 @@ CSRF_COOKIE_NAME = SESSION_COOKIE_NAME + "_csrf"
 # Uploads are refused by their declared length before anything reads the body.
 UPLOAD_MAX_BYTES = env_int("BANDLEDGER_UPLOAD_MAX_BYTES", 64 * 1024 * 1024)
 UPLOAD_MAX_FILES = env_int("BANDLEDGER_UPLOAD_MAX_FILES", 60)
-DATA_UPLOAD_MAX_NUMBER_FILES = UPLOAD_MAX_FILES
+DATA_UPLOAD_MAX_NUMBER_FILES = UPLOAD_MAX_FILES + 1  # one more reaches the page, which says so beside its form
 DATA_UPLOAD_MAX_MEMORY_SIZE = 2 * 1024 * 1024
 FILE_UPLOAD_MAX_MEMORY_SIZE = 4 * 1024 * 1024
 FILE_UPLOAD_PERMISSIONS = 0o640

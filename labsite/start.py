@@ -26,6 +26,9 @@ from labsite.supervisor import STOP_SIGNALS, Program, Supervisor
 DEFAULT_HOST = "127.0.0.1"
 DEFAULT_PORT = 8760
 SERVER_THREADS = 8
+CONNECTION_LIMIT = 800  # each takes a file descriptor, of which a process often has 1024
+SILENT_SECONDS = 20
+BODY_MARGIN_BYTES = 1024 * 1024
 SWEEP_SECONDS = 5
 READY_SECONDS = 60
 STALE_WORKER = "stale-worker "
@@ -121,9 +124,12 @@ def programs(
     """The three children. `trusted_proxy` is the address whose word on the client and on HTTPS is believed, or ''."""
     python, manage = sys.executable, str(ROOT / "manage.py")
     listen = f"[{host}]:{port}" if ":" in host else f"{host}:{port}"
-    # The application words its own refusal of what is too long; the server only bounds what it stores meanwhile.
+    # The server stores a body before the application can refuse it, whoever sends it, so it bounds it itself. And it
+    # closes what stays silent, or a few connections that never finish a request would keep everybody out.
     server = [python, "-m", "waitress", f"--listen={listen}", f"--threads={SERVER_THREADS}", "--ident=",
-              f"--max-request-body-size={max(4 * upload_max_bytes, 256 * 1024 * 1024)}"]  # fmt: skip
+              f"--max-request-body-size={upload_max_bytes + BODY_MARGIN_BYTES}",
+              f"--connection-limit={CONNECTION_LIMIT}", f"--channel-timeout={SILENT_SECONDS}",
+              f"--cleanup-interval={SILENT_SECONDS // 2}", "--asyncore-use-poll"]  # fmt: skip
     if trusted_proxy:
         server += [f"--trusted-proxy={trusted_proxy}", "--trusted-proxy-headers=x-forwarded-for x-forwarded-proto"]
     # The prefork pool forks after system libraries were used, which macOS does not allow.

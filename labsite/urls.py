@@ -13,6 +13,7 @@ urlpatterns = [
     path("", include("reviews.urls")),
 ]
 
+handler400 = "labsite.views.not_understood"
 handler403 = "labsite.views.not_allowed"
 handler404 = "labsite.views.not_found"
 handler500 = "labsite.views.server_error"

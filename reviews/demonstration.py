@@ -53,6 +53,10 @@ def is_loaded() -> bool:
     return TrailEntry.objects.filter(event=Event.DEMO_LOADED).exists()
 
 
+def is_begun() -> bool:
+    return User.objects.exists()
+
+
 def load(*, say: Say) -> None:
     """Fill an empty database with the demonstration. `say` is told each step."""
     if not settings.DEMO:
@@ -61,7 +65,7 @@ def load(*, say: Say) -> None:
             "The demonstration is loaded only into a database of its own.",
             remedy="Start with `python3 manage.py start`, or set BANDLEDGER_DEMO=1.",
         )
-    if User.objects.exists():
+    if is_begun():
         raise NotPossible(
             "demo.not_empty",
             "This database holds accounts already, so a loading was interrupted.",

@@ -11,6 +11,9 @@ from spectra.trail_words import group_name
 LONGEST_ID = 18  # digits that every database takes for a number
 
 LABELS = {
+    "review_sha256": "Hash of the second reading",
+    "decided_at": "Decided at",
+    "withdrawn_at": "Withdrawn at",
     "by_version": "By version",
     "check": "Instrument check",
     "claim": "Statement",

@@ -15,9 +15,10 @@ class SpectraConfig(AppConfig):
 
     def ready(self) -> None:
         from labsite.context import register_place
-        from spectra import integrity
+        from spectra import integrity, trail_words
         from spectra.permissions import READERS
 
         integrity.register()
+        trail_words.register()
         for label, url_name, order in PLACES:
             register_place(label, url_name, roles=READERS, order=order)

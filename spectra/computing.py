@@ -130,7 +130,7 @@ def compute(analysis: Analysis, *, progress: Callable[[str, float], None] | None
         forbidden_groups=tuple(material.forbidden_groups),
         progress=progress,
     )
-    # What the verdicts were held against belongs to the result: the material's record may have moved on when it is read.
+    # What the verdicts were held against belongs to the result: the material's record may have moved on by then.
     document = result.to_json() | {
         "declared": {
             "expected_groups": list(material.expected_groups),

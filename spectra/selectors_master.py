@@ -75,6 +75,7 @@ class StructureFacts:
     drawn: structure.Structure | None
     groups: tuple[str, ...] = ()
     problem: str = ""
+    group_ids: tuple[str, ...] = ()
 
 
 def kind_of(row: models.Model) -> str:
@@ -209,7 +210,7 @@ def structure_facts(text: str) -> StructureFacts:
         found = structure.expected_groups(text, table) if table else ()
     except CoreError as error:
         return StructureFacts(None, problem=f"{error.problem.message} {error.problem.remedy}".strip())
-    return StructureFacts(drawn, tuple(names.get(group, group) for group in found))
+    return StructureFacts(drawn, tuple(names.get(group, group) for group in found), group_ids=tuple(found))
 
 
 def material_structure(version: MaterialVersion) -> StructureFacts:

@@ -19,7 +19,7 @@ from django.utils import timezone
 
 from labsite.trail.record import unit_of_work
 
-from .models import LockOut
+from .models import LockOut, User
 
 LOCK_OUTS_KEPT_DAYS = 7
 
@@ -37,6 +37,24 @@ class FailedAttempt:
     def facts(self) -> dict[str, object]:
         facts: dict[str, object] = {"failures": self.failures, "locked": self.locked}
         return facts | ({"turned_away": self.turned_away} if self.turned_away else {})
+
+
+def counted_as(username_key: str, area: str) -> str:
+    """The name that failures in `area` are counted under. A capital letter keeps it apart from every name that can be
+    typed at the sign-in page, because those are folded."""
+    return username_key if area == "accounts" else f"{area.upper()} {username_key}"
+
+
+def proves_itself(request: HttpRequest, key: str, user_id: int, password: str) -> bool:
+    """Whether `password` is that of the active account `user_id`; a failure is counted under `key`, and while that is
+    locked nothing is checked."""
+    credentials = {"username": key}
+    if AxesProxyHandler.is_allowed(request, credentials):
+        user = User.objects.filter(pk=user_id, is_active=True).first()
+        if user is not None and user.check_password(password):
+            return True
+        AxesProxyHandler.user_login_failed(__name__, credentials, request)
+    return False
 
 
 def count_failure(request: HttpRequest, username_key: str) -> FailedAttempt:
@@ -77,7 +95,7 @@ def forget_failures(request: HttpRequest, username_key: str) -> None:
 
 def remedy() -> str:
     minutes = round(settings.AXES_COOLOFF_TIME * 60)
-    return f"Wait {minutes} minutes after the last attempt, or ask the lab administrator for a new password."
+    return f"Wait {minutes} minutes after the last attempt."
 
 
 def keep_our_answer(request: HttpRequest, response: HttpResponse | None, credentials: dict | None) -> HttpResponse:

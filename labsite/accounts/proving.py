@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from django.contrib.auth import authenticate
 from django.http import HttpRequest
 
 from labsite.errors import BadInput, NotAllowed
@@ -18,17 +17,18 @@ def prove_password(
 ) -> None:
     """Return if `password` is that of the signed-in person. Otherwise record `event` and raise.
 
-    `what` says in the trail what the password was asked for. Raises BadInput (`<area>.wrong_password`, naming
-    `field`), or NotAllowed (`<area>.locked_out`) after too many failures.
+    `what` says in the trail what the password was asked for. Failures count for `area`: those at the sign-in page,
+    which anybody can cause, lock no signature, and wrong signatures lock no sign-in.
+    Raises BadInput (`<area>.wrong_password`, naming `field`), or NotAllowed (`<area>.locked_out`) after too many.
     """
     if in_unit_of_work():
         raise RuntimeError("a password was to be checked while records are locked")
     person = request.user
-    proved = authenticate(request, username=person.username_key, password=password)
-    if proved is not None and proved.pk == person.pk:
-        lockout.forget_failures(request, person.username_key)
+    key = lockout.counted_as(person.username_key, area)
+    if lockout.proves_itself(request, key, person.pk, password):
+        lockout.forget_failures(request, key)
         return
-    attempt = lockout.count_failure(request, person.username_key)
+    attempt = lockout.count_failure(request, key)
     if attempt.worth_recording:
         with unit_of_work():
             record(event, by=person, subject=account_subject(person), facts={"asked_for": what, **attempt.facts()})

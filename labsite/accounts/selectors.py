@@ -2,12 +2,31 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+from datetime import datetime, timedelta
+
 from django.conf import settings
 from django.db.models import Prefetch, QuerySet
+from django.utils import timezone
 
 from labsite.errors import NotVisible
+from labsite.trail.events import Event
+from labsite.trail.models import TrailEntry
 
 from .models import LabSetting, RoleGrant, User
+
+RESETS_TOLD_DAYS = 30
+
+
+@dataclass(frozen=True)
+class PasswordReset:
+    """Somebody else set a temporary password for `person`: whoever read it could have signed in with it."""
+
+    seq: int  # of its entry in the trail
+    at: datetime
+    person: User
+    by: User | None
+    reason: str
 
 
 def lab_setting(key: str, default: str = "") -> str:
@@ -52,3 +71,18 @@ def people_by_id(ids: set[int]) -> dict[int, User]:
 
 def role_history(user: User) -> QuerySet[RoleGrant]:
     return user.role_grants.select_related("granted_by", "revoked_by").order_by("-granted_at", "-pk")
+
+
+def recent_resets(*, person: User | None = None, days: int = RESETS_TOLD_DAYS) -> list[PasswordReset]:
+    """The passwords that were reset in the last `days` days (only those of `person`, if given), newest first."""
+    entries = TrailEntry.objects.filter(
+        event=Event.ACCOUNT_PASSWORD_RESET, subject_kind="account", at__gte=timezone.now() - timedelta(days=days)
+    )
+    if person is not None:
+        entries = entries.filter(subject_id=str(person.pk))
+    rows = list(entries.order_by("-seq").values_list("seq", "at", "subject_id", "actor_id", "reason"))
+    people = people_by_id({int(row[2]) for row in rows} | {row[3] for row in rows if row[3] is not None})
+    return [
+        PasswordReset(seq, at, people[int(account)], people.get(actor), reason)
+        for seq, at, account, actor, reason in rows
+    ]

@@ -132,9 +132,15 @@ def _store_new_user(user: User, *, by: User | None) -> None:
 
 
 def grant_role(*, by: User, user_id: int, role: str, reason: str) -> RoleGrant:
-    """Give `role` to the account; keeps administration apart from analysing and reviewing."""
+    """Give `role` to another person's account; keeps administration apart from analysing and reviewing."""
     require(by, Role.LAB_ADMINISTRATOR)
     wanted, reason = _known_role(role), _reason(reason)
+    if user_id == by.pk:
+        raise NotPossible(
+            "accounts.own_role",
+            "Nobody gives a role to themselves.",
+            remedy="Another lab administrator can give it to you.",
+        )
     with unit_of_work():
         user = _locked(user_id)
         if not user.is_active:
@@ -298,6 +304,12 @@ def set_small_laboratory(*, by: User, allowed: bool, reason: str) -> LabSetting:
     """Record whether one person may administer the system and also analyse or review."""
     require(by, Role.QA_MANAGER)
     reason = _reason(reason)
+    if by.has_role(Role.LAB_ADMINISTRATOR):
+        raise NotPossible(
+            "accounts.decides_on_own_exception",
+            "Whoever administers the system does not decide on this exception.",
+            remedy="A QA manager who is not lab administrator can.",
+        )
     with unit_of_work():
         # Every account is locked, as grant_role locks one, so that nobody gains a role meanwhile.
         list(User.objects.select_for_update().order_by("pk").values_list("pk"))

@@ -58,7 +58,8 @@ def sign_in(request: HttpRequest) -> HttpResponse:
     form, status = SignInForm(request.POST if request.method == "POST" else None), 200
     if form.is_valid():
         try:
-            sessions.sign_in(request, **form.cleaned_data)
+            user = sessions.sign_in(request, **form.cleaned_data)
+            _tell_of_resets(request, user)
             return redirect(wanted or "home")
         except NotAllowed as error:
             refused(form, error)
@@ -70,6 +71,20 @@ def sign_in(request: HttpRequest) -> HttpResponse:
         "nobody_yet": not selectors.anybody(),
     }
     return render(request, "accounts/sign_in.html", context, status=_answer(form, status))
+
+
+def _tell_of_resets(request: HttpRequest, user: User) -> None:
+    """At the first sign-in with a temporary password, name every reset of late: one that the person did not ask for
+    means that somebody else may have signed in as them."""
+    if not user.must_change_password:
+        return
+    for reset in selectors.recent_resets(person=user):
+        by = reset.by.printed_name if reset.by else "the system"
+        messages.warning(
+            request,
+            f"Your password was reset by {by} on {reset.at:%Y-%m-%d at %H:%M} UTC. Reason: {reset.reason.rstrip('.')}."
+            " If you did not ask for that, tell the QA manager.",
+        )
 
 
 @login_not_required
@@ -251,6 +266,6 @@ def small_laboratory(request: HttpRequest) -> HttpResponse:
         "form": form,
         "allowed": allowed,
         "history": selectors.setting_history(settings.SMALL_LABORATORY_KEY),
-        "may_set": request.user.has_role(Role.QA_MANAGER),
+        "may_set": request.user.has_role(Role.QA_MANAGER) and not request.user.has_role(Role.LAB_ADMINISTRATOR),
     }
     return render(request, "accounts/small_laboratory.html", context, status=_answer(form, status))

@@ -8,7 +8,10 @@ class SigningConfig(AppConfig):
 
     def ready(self) -> None:
         from labsite.trail.verify import register_verifier
+        from labsite.trail.words import register_words
 
+        from .models import Meaning
         from .verify import signature_damages
 
         register_verifier("signatures", signature_damages)
+        register_words(values={"meaning": dict(Meaning.choices)})

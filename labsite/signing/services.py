@@ -21,7 +21,7 @@ from labsite.accounts.models import User
 from labsite.accounts.proving import prove_password
 from labsite.errors import NotAllowed, NotPossible
 from labsite.trail.canonical import clean_text
-from labsite.trail.events import Event, Subject
+from labsite.trail.events import Event, Subject, in_words
 from labsite.trail.record import in_unit_of_work, record, unit_of_work
 
 from .digest import signature_digest
@@ -107,7 +107,7 @@ def sign(
     record(
         Event.SIGNATURE_MADE,
         by=by,
-        subject=Subject(kind, subject_id, label or f"{kind} {subject_id}"),
+        subject=Subject(kind, subject_id, label or f"{in_words(kind).lower()} {subject_id}"),
         facts={
             "signature": signature.pk,
             "digest": signature.digest,

@@ -9,7 +9,7 @@ from django.db.models import Max
 
 from labsite.trail.events import Event
 from labsite.trail.models import TrailEntry
-from labsite.trail.verify import CHUNK, Damage
+from labsite.trail.verify import CHUNK, Damage, stored_bytes
 
 from .digest import signature_digest
 from .models import Signature
@@ -28,9 +28,9 @@ def signature_damages() -> Iterator[Damage]:
     entries = TrailEntry.objects.filter(event=Event.SIGNATURE_MADE).order_by("seq").values_list("seq", "canonical")
     for seq, stored in entries.iterator(chunk_size=CHUNK):
         try:
-            facts = json.loads(bytes(stored))["facts"]
+            facts = json.loads(stored_bytes(stored) or b"")["facts"]
             pk, promised = facts["signature"], (facts["digest"], facts["content_hash"])
-        except (ValueError, KeyError, TypeError):
+        except (ValueError, KeyError, TypeError, RecursionError):
             continue  # the chain reports an entry that cannot be read
         recorded.add(pk)
         if pk not in known:

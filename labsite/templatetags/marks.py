@@ -29,10 +29,21 @@ SHAPES = {
     "complies": "present",
     "does_not_comply": "absent",
     "inconclusive": "unclear",
+    "usable": "present",
+    "limits_reading": "unclear",
+    "not_usable": "absent",
+    "open": "unclear",
+    "explained": "present",
+    "artefact": "absent",
 }
 WORDS = {
     "not_found_above_limit": "not found above its limit",
     "cannot_be_seen": "cannot be seen here",
+    "usable": "usable for this test",
+    "limits_reading": "limits what can be read",
+    "not_usable": "not usable for this test",
+    "open": "not explained",
+    "artefact": "an artefact of the measurement",
 }
 SPOKEN = {word.replace(" ", "_"): key for key, word in WORDS.items()}
 AGREEMENT = {"yes": "as expected", "no": "against expectation", "neutral": "open"}

@@ -23,6 +23,11 @@ def clean_text(text: str) -> str:
     return _UNSTORABLE.sub("\ufffd", str.__str__(text))
 
 
+def storable(*texts: str) -> bool:
+    """Whether `clean_text` would leave every one of `texts` as it is."""
+    return not any(_UNSTORABLE.search(text) for text in texts)
+
+
 def utc_text(moment: datetime) -> str:
     """`2026-12-01T15:04:05.123456Z`; `moment` must know its time zone."""
     if moment.tzinfo is None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+import re
 from collections.abc import Iterable, Iterator
 
 from .canonical import utc_text
@@ -28,12 +29,17 @@ COLUMNS = (
     "entry_hash",
 )
 # What makes a spreadsheet take a cell for a formula, full-width forms included.
-FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r", "\n", "\uff1d", "\uff0b", "\uff0d", "\uff20")
+_SIGNS = "=+\\-@\uff1d\uff0b\uff0d\uff20"
+# A spreadsheet that takes a semicolon or a tab for the separator cuts a quoted cell in pieces, so a formula can begin
+# after each of them; it passes over blanks and quotation marks in front.
+_FORMULA = re.compile(rf"""(\A|[;,|\t\r\n])([\s"]*)([{_SIGNS}])""")
 
 
 def safe_cell(text: str) -> str:
-    """`text` such that a spreadsheet shows it instead of computing it: an apostrophe stands before a formula's sign."""
-    return f"'{text}" if text.startswith(FORMULA_STARTS) else text
+    """`text` such that a spreadsheet shows it instead of computing it: an apostrophe stands before a formula's sign,
+    at the beginning and behind whatever a spreadsheet may take for a separator."""
+    safe = _FORMULA.sub(r"\1\2'\3", text)
+    return f"'{safe}" if safe.startswith(("\t", "\r", "\n")) else safe
 
 
 class _Line:

@@ -6,8 +6,7 @@ Totals are never counted: on a large trail that alone takes longer than a page m
 from __future__ import annotations
 
 import json
-import re
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from datetime import datetime
 
@@ -19,12 +18,12 @@ from labsite.errors import NotVisible
 
 from .events import Event, in_words
 from .models import TrailEntry, TrailPersonal
+from .words import HASH, label_of, text_of
 
 READERS = tuple(Role.values)
 EXPORTERS = (Role.QA_MANAGER,)
 EXPORT_CHUNK = 1000
 SHOWN_IN_LINE = 3
-HASH = re.compile("[0-9a-f]{64}")
 
 Redaction = Callable[["User | None", "QuerySet[TrailEntry]"], "QuerySet[TrailEntry]"]
 _redactions: list[Redaction] = []
@@ -36,6 +35,27 @@ def register_redaction(fn: Redaction) -> None:
     Every reading function here passes through all redactions.
     """
     _redactions.append(fn)
+
+
+Related = Callable[[str], Iterable[tuple[str, "str | int"]]]
+_related: dict[str, Related] = {}
+
+
+def register_related(kind: str, fn: Related) -> None:
+    """Let the history of a record of `kind` show the entries of other records too.
+
+    `fn(subject_id)` names them as (kind, id); it is asked with whatever stands in the address, and answers with nothing
+    for a record that it does not know.
+    """
+    _related[kind] = fn
+
+
+def about(kind: str, subject_id: str | int) -> Q:
+    """The entries that belong to the history of one record: its own and those of its related records."""
+    wanted = Q(subject_kind=kind, subject_id=str(subject_id))
+    for other_kind, other_id in _related[kind](str(subject_id)) if kind in _related else ():
+        wanted |= Q(subject_kind=other_kind, subject_id=str(other_id))
+    return wanted
 
 
 @dataclass(frozen=True)
@@ -112,7 +132,8 @@ def matching(
     """The entries that fit everything asked for; `since` is included, `until` is not.
 
     `text` is looked for, without regard to case, in labels, reasons and values, and in the names of the people who
-    acted. `event` may be a whole event (`sample.changed`) or its first part (`sample`).
+    acted. `event` may be a whole event (`sample.changed`) or its first part (`sample`). A kind together with an id asks
+    for the history of that record, as `timeline` tells it.
     """
     entries = visible(by)
     if text := text.strip():
@@ -124,9 +145,11 @@ def matching(
         entries = entries.filter(event=event) if "." in event else entries.filter(event__startswith=f"{event}.")
     if actor_id is not None:
         entries = entries.filter(actor_id=actor_id)
-    if subject_kind:
+    if subject_kind and subject_id:
+        entries = entries.filter(about(subject_kind, subject_id))
+    elif subject_kind:
         entries = entries.filter(subject_kind=subject_kind)
-    if subject_id:
+    elif subject_id:
         entries = entries.filter(subject_id=subject_id)
     if since is not None:
         entries = entries.filter(at__gte=since)
@@ -158,8 +181,8 @@ def search(
 
 
 def timeline(kind: str, id: str | int, *, by: User | None = None) -> list[EntryRow]:  # noqa: A002
-    """Everything that happened to one record, oldest first."""
-    return as_rows(list(visible(by).filter(subject_kind=kind, subject_id=str(id)).order_by("seq")))
+    """Everything that happened to one record and its related ones, oldest first."""
+    return as_rows(list(visible(by).filter(about(kind, id)).order_by("seq")))
 
 
 def entry(seq: int, *, by: User | None = None) -> EntryRow:
@@ -270,7 +293,7 @@ def _row(found: TrailEntry, details: dict, accounts: dict[int, User]) -> EntryRo
         subject_id=found.subject_id,
         subject_label=label,
         reason=found.reason,
-        facts=tuple((in_words(name), readable(value)) for name, value in (content.get("facts") or {}).items()),
+        facts=tuple(_facts(content.get("facts") or {})),
         changes=tuple(_changes(old or {}, new or {})),
         request_id=found.request_id,
         entry_hash=found.entry_hash,
@@ -289,22 +312,14 @@ def _role_label(role: str) -> str:
     return Role(role).label if role in Role.values else role
 
 
+def _facts(facts: dict) -> Iterator[tuple[str, str]]:
+    for name, value in facts.items():
+        if text := text_of(name, value):
+            yield label_of(name), text
+
+
 def _changes(old: dict, new: dict) -> Iterator[Change]:
     for name in [*old, *(name for name in new if name not in old)]:
-        before = readable(old[name]) if name in old else ""
-        after = readable(new[name]) if name in new else ""
-        if name not in old or name not in new or before != after:
-            yield Change(in_words(name), before, after)
-
-
-def readable(value: object) -> str:
-    """A recorded value as people write it."""
-    if value is None or value == "":
-        return "none"
-    if isinstance(value, bool):
-        return "yes" if value else "no"
-    if isinstance(value, list):
-        return ", ".join(readable(item) for item in value) if value else "none"
-    if isinstance(value, dict):
-        return "; ".join(f"{in_words(name)}: {readable(item)}" for name, item in value.items()) if value else "none"
-    return str(value)
+        before, after = text_of(name, old.get(name)), text_of(name, new.get(name))
+        if before != after or (old.get(name) != new.get(name) and before):
+            yield Change(label_of(name), before, after)

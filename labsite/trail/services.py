@@ -9,7 +9,7 @@ from labsite.accounts.models import User
 from labsite.accounts.permissions import require
 
 from . import exports, selectors
-from .events import Event, Subject
+from .events import Event, Subject, in_words
 from .record import record, unit_of_work
 from .verify import Verification, verify
 
@@ -50,7 +50,9 @@ def export(*, by: User, as_json: bool, filters: dict[str, object]) -> Iterator[s
         record(
             Event.TRAIL_RECORD_EXPORTED if whole_record else Event.TRAIL_EXPORTED,
             by=by,
-            subject=Subject(str(kind), str(subject_id), f"{kind} {subject_id}") if whole_record else THE_TRAIL,
+            subject=Subject(str(kind), str(subject_id), f"{in_words(str(kind)).lower()} {subject_id}")
+            if whole_record
+            else THE_TRAIL,
             facts={"format": "JSON" if as_json else "CSV", "through_entry": through_seq, "asked_for": asked},
         )
     rows = selectors.export_rows(selectors.matching(by=by, **filters), through_seq=through_seq)

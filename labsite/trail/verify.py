@@ -15,9 +15,12 @@ from . import canonical, chain
 from .columns import derived_columns
 from .merkle import TreeRoot
 from .models import TrailEntry, TrailHead, TrailPersonal
+from .triggers import missing_triggers
 
 CHUNK = 2000
 DAMAGES_SHOWN = 200  # after so many the rest is only counted as "more"
+NO_TIME = (AttributeError, TypeError, ValueError)  # how the conversion of a time ends that is none
+OTHER_FORM = "its content is stored in another form than the bytes that the trail writes"
 
 
 @dataclass(frozen=True)
@@ -73,29 +76,71 @@ def verify(progress: Callable[[int, int], None] | None = None, *, fast: bool = F
 def _all_damages(
     head: TrailHead | None, last_seq: int, tree: TreeRoot, progress: Callable | None, fast: bool
 ) -> Iterator[Damage]:
-    yield from _chain_damages(head, last_seq, tree, progress, fast)
-    yield from _tail_damages(last_seq)
+    yield from _to_its_end("chain of entries", lambda: _chain_damages(head, last_seq, tree, progress, fast))
+    yield from _to_its_end("head of the trail", lambda: _tail_damages(last_seq))
     if not fast:
-        yield from _personal_damages(last_seq)
+        yield from _to_its_end("personal details", lambda: _personal_damages(last_seq))
         for name, verifier in _verifiers.items():
-            try:
-                yield from verifier()
-            except Exception as problem:  # noqa: BLE001  (a check that cannot run is a finding, never a silence)
-                yield Damage(name, f"this check could not be finished: {type(problem).__name__}: {problem}")
+            yield from _to_its_end(name, verifier)
+
+
+def _to_its_end(name: str, verifier: Verifier) -> Iterator[Damage]:
+    try:
+        yield from verifier()
+    except Exception as problem:  # noqa: BLE001  (a check that cannot run is a finding, never a silence)
+        yield Damage(name, f"this check could not be finished: {type(problem).__name__}: {problem}")
+
+
+def stored_bytes(value: object) -> bytes | None:
+    """What a binary column holds, or None where something else was put into it: SQLite stores any form anywhere."""
+    return bytes(value) if isinstance(value, (bytes, bytearray, memoryview)) else None
+
+
+def _entries_one_by_one(last_seq: int, *, fast: bool) -> Iterator[TrailEntry]:
+    """Every entry up to `last_seq`; `at` is None where what stands there is no time, and not read at all if `fast`."""
+    entries = TrailEntry.objects.filter(seq__lte=last_seq).order_by("seq")
+    if fast:
+        entries = entries.defer("at")
+    after = 0
+    while True:
+        try:
+            for entry in entries.filter(seq__gt=after).iterator(chunk_size=CHUNK):
+                after = entry.seq
+                yield entry
+            return
+        except NO_TIME:
+            following = list(entries.filter(seq__gt=after).values_list("seq", flat=True)[:CHUNK])
+        for seq in following:  # one of these it was; the database hands over many at once, and none of them then
+            entry, sound = _entry_alone(seq)
+            after = seq
+            yield entry
+            if not sound:
+                break
+
+
+def _entry_alone(seq: int) -> tuple[TrailEntry, bool]:
+    try:
+        return TrailEntry.objects.get(seq=seq), True
+    except NO_TIME:
+        entry = TrailEntry.objects.defer("at").get(seq=seq)
+        entry.at = None
+        return entry, False
 
 
 def _chain_damages(
     head: TrailHead | None, last_seq: int, tree: TreeRoot, progress: Callable | None, fast: bool
 ) -> Iterator[Damage]:
     expected_seq, previous = 1, chain.GENESIS
-    for entry in TrailEntry.objects.filter(seq__lte=last_seq).order_by("seq").iterator(chunk_size=CHUNK):
+    for entry in _entries_one_by_one(last_seq, fast=fast):
         where = f"entry {entry.seq}"
         if entry.seq != expected_seq:
             yield Damage(where, f"{_entries(expected_seq, entry.seq - 1)} missing before it")
-        stored = bytes(entry.canonical)
-        tree.add(bytes.fromhex(chain.entry_hash(stored)))
-        content = _parsed(stored)
-        if chain.entry_hash(stored) != entry.entry_hash:
+        stored = stored_bytes(entry.canonical)
+        tree.add(bytes.fromhex(chain.entry_hash(stored or b"")))
+        content = None if stored is None else _parsed(stored)
+        if stored is None:
+            yield Damage(where, OTHER_FORM)
+        elif chain.entry_hash(stored) != entry.entry_hash:
             yield Damage(where, "its content was changed: it no longer gives the hash that was stored with it")
         elif content is None:
             yield Damage(where, "its content cannot be read")
@@ -124,7 +169,7 @@ def _entries(first: int, last: int) -> str:
 def _parsed(stored: bytes) -> dict | None:
     try:
         content = json.loads(stored)
-    except ValueError:
+    except (ValueError, RecursionError):
         return None
     return content if isinstance(content, dict) else None
 
@@ -134,7 +179,7 @@ def _column_damages(entry: TrailEntry, stored: bytes, content: dict) -> Iterator
     try:
         expected = derived_columns(content)
         same_bytes = canonical.canonical_bytes(content) == stored
-    except (KeyError, TypeError, ValueError) as problem:
+    except (AttributeError, KeyError, TypeError, ValueError, RecursionError) as problem:
         yield Damage(where, f"its content lacks something that every entry has ({problem})")
         return
     if not same_bytes:
@@ -161,22 +206,36 @@ def _personal_damages(last_seq: int) -> Iterator[Damage]:
     entries = TrailEntry.objects.filter(seq__lte=last_seq).order_by("seq")
     following = next(found, None)
     for seq, stored in entries.values_list("seq", "canonical").iterator(chunk_size=CHUNK):
-        content = _parsed(bytes(stored))
-        if content is None:
-            continue  # already reported
         while following is not None and following.entry_id < seq:
             yield Damage(f"entry {following.entry_id}", "personal details without an entry")
             following = next(found, None)
         mine = following if following is not None and following.entry_id == seq else None
         if mine is not None:
             following = next(found, None)
+        as_bytes = stored_bytes(stored)
+        content = None if as_bytes is None else _parsed(as_bytes)
+        if content is None:
+            continue  # already reported
         promised = content.get("personal")
         if promised is None and mine is not None:
             yield Damage(f"entry {seq}", "personal details were added to it")
         elif promised is not None and mine is None:
             yield Damage(f"entry {seq}", "its personal details were removed")
-        elif mine is not None and chain.personal_hash(bytes(mine.salt), bytes(mine.details)) != promised:
-            yield Damage(f"entry {seq}", "its personal details (name or address) were changed")
+        elif mine is not None:
+            salt, details = stored_bytes(mine.salt), stored_bytes(mine.details)
+            if salt is None or details is None:
+                yield Damage(f"entry {seq}", "its personal details are stored in another form than the trail writes")
+            elif chain.personal_hash(salt, details) != promised:
+                yield Damage(f"entry {seq}", "its personal details (name or address) were changed")
     while following is not None:
         yield Damage(f"entry {following.entry_id}", "personal details without an entry")
         following = next(found, None)
+
+
+def trigger_damages() -> Iterator[Damage]:
+    """The database triggers that are gone: what was done to records meanwhile left no other trace."""
+    for name in missing_triggers():
+        yield Damage(f"trigger {name}", "missing or altered: records could be changed unnoticed")
+
+
+register_verifier("triggers", trigger_damages)

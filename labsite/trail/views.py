@@ -61,14 +61,15 @@ def entry(request: HttpRequest, seq: int) -> HttpResponse:
 @readers_only
 def record(request: HttpRequest, kind: str, subject_id: str) -> HttpResponse:
     rows = selectors.timeline(kind, subject_id, by=request.user)
-    if not rows:
+    own = [row for row in rows if (row.subject_kind, row.subject_id) == (kind, subject_id)]
+    if not own:
         raise NotVisible("trail.no_such_record", "The trail has no entry about such a record.")
     context = {
         "rows": rows,
         "kind": kind,
         "kind_label": in_words(kind),
         "subject_id": subject_id,
-        "label": rows[-1].subject_label,
+        "label": own[-1].subject_label,
         "may_export": request.user.has_role(*selectors.EXPORTERS),
     }
     return render(request, "trail/record.html", context)

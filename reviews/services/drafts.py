@@ -28,8 +28,10 @@ from reviews.models import (
 from reviews.transitions import Action, State
 from reviews.words import VERDICTS, agrees_after, verdict_words
 from spectra import selectors as spectra_selectors
-from spectra.models import Analysis, ContributionKind, Examination, SpectrumRole
+from spectra.models import Analysis, ContributionKind, SpectrumRole
+from spectra.services.locking import locked_examination
 from spectra.services.receiving import contribute
+from spectra.services.texts import LONGEST_TITLE, bounded
 from spectra.subjects import examination_subject
 
 CONSISTENT = ("consistent", "consistent_with_differences")
@@ -45,9 +47,11 @@ def label_of(version: InterpretationVersion) -> str:
 
 
 def locked(version_id: int) -> InterpretationVersion:
-    """The version under its lock, with what its rules ask about."""
+    """The version under its lock, with what its rules ask about. Its examination is locked before it: see `locking`."""
+    known = InterpretationVersion.objects.filter(pk=version_id)
+    locked_examination(known.values_list("interpretation__examination_id", flat=True).first())
     version = (
-        InterpretationVersion.objects.select_for_update(of=("self",))
+        InterpretationVersion.objects.select_for_update(of=("self",), no_key=True)
         .select_related("interpretation__examination")
         .filter(pk=version_id)
         .first()
@@ -77,7 +81,7 @@ def draft_from_analysis(analysis: Analysis) -> None:
             interpretation=interpretation, number=1, analysis=analysis, opened_at=timezone.now()
         )
     else:
-        version = interpretation.versions.select_for_update().filter(state=State.DRAFT).first()
+        version = interpretation.versions.select_for_update(no_key=True).filter(state=State.DRAFT).first()
         if version is None:
             return
         record(
@@ -117,7 +121,7 @@ def _write_claims(version: InterpretationVersion, claims: list[DraftClaim]) -> N
             key=claim.key,
             kind=claim.kind,
             subject=claim.subject[:120],
-            title=claim.title[:200],
+            title=claim.title[:LONGEST_TITLE],
             sort=sort,
             computed_verdict=claim.verdict,
             computed_agrees=claim.agrees,
@@ -217,7 +221,7 @@ def confirm_uneventful(*, version_id: int, by: User) -> int:
 
 def change_claim(*, version_id: int, claim_id: int, by: User, verdict: str, reason: str, edits: int | None) -> Claim:
     """The analyst says otherwise than the computation, with a reason that the reviewer will read."""
-    reason = reason.strip()
+    reason = bounded(reason, field="reason")
     with unit_of_work():
         version = _editable(version_id, by, edits)
         claim = _claim(version, claim_id)
@@ -259,7 +263,7 @@ def _expected(claim: Claim) -> bool | None:
 
 def add_claim(*, version_id: int, by: User, kind: str, title: str, verdict: str, reason: str) -> Claim:
     """A claim of the analyst's own, beside the computed ones; the reason is its evidence in words."""
-    title, reason = title.strip(), reason.strip()
+    title, reason = bounded(title, field="title", longest=LONGEST_TITLE), bounded(reason, field="reason")
     with unit_of_work():
         version = _editable(version_id, by, None)
         if kind not in (ClaimKind.GROUP, ClaimKind.IMPURITY, ClaimKind.UNEXPLAINED, ClaimKind.QUALITY):
@@ -279,7 +283,7 @@ def add_claim(*, version_id: int, by: User, kind: str, title: str, verdict: str,
             key=key,
             kind=kind,
             subject=slug[:40],
-            title=title[:200],
+            title=title,
             sort=1000 + version.claims.count(),
             status=ClaimStatus.ADDED,
             verdict=verdict,
@@ -302,13 +306,14 @@ def add_claim(*, version_id: int, by: User, kind: str, title: str, verdict: str,
 
 
 def remove_claim(*, version_id: int, claim_id: int, by: User, reason: str) -> None:
-    """Take back a claim that was added; a computed one is never removed, only changed."""
+    """Take back a claim that was added, and say why; a computed one is never removed, only changed."""
+    reason = bounded(reason, field="reason")
     with unit_of_work():
         version = _editable(version_id, by, None)
         claim = _claim(version, claim_id)
         if claim.status != ClaimStatus.ADDED:
             raise NotPossible("claim.computed", "A computed claim stays.", remedy="Change its verdict and say why.")
-        if not reason.strip():
+        if not reason:
             raise BadInput("claim.no_reason", "Say why the claim is taken back.", field="reason")
         record(
             Event.CLAIM_REMOVED,
@@ -316,7 +321,7 @@ def remove_claim(*, version_id: int, claim_id: int, by: User, reason: str) -> No
             subject=subject_of(version),
             facts={"version": version.number, "claim": claim.key},
             old={"title": claim.title, "verdict": claim.verdict, "reason": claim.reason},
-            reason=reason.strip(),
+            reason=reason,
         )
         claim.delete()
         _edited(version, by, ContributionKind.CLAIMED)
@@ -326,7 +331,7 @@ def write_conclusion(
     *, version_id: int, by: User, conclusion: str, text: str, edits: int | None
 ) -> InterpretationVersion:
     """Identity by infrared complies, does not comply, or is inconclusive; kept with the draft until it is submitted."""
-    text = text.strip()
+    text = bounded(text, field="conclusion_text")
     with unit_of_work():
         version = _editable(version_id, by, edits)
         _judge_conclusion(version, conclusion, text)
@@ -410,8 +415,7 @@ def _judge_evidence(version: InterpretationVersion) -> None:
 def submit(*, version_id: int, by: User, proof: SigningProof, content_hash: str) -> InterpretationVersion:
     """Cut the version: its content is frozen under its hash and signed, its points are frozen with it."""
     with unit_of_work():
-        # The examination first: an upload that holds it could otherwise add a spectrum to what is being signed.
-        Examination.objects.select_for_update().filter(interpretation__versions=version_id).first()
+        # With the examination held no upload can add a spectrum to what is being signed.
         version = locked(version_id)
         state = permissions.require(by, version, Action.SUBMIT)
         points, document, actual = preview(version)
@@ -474,12 +478,13 @@ def _freeze_points(version: InterpretationVersion, points: list) -> None:
 
 def revise(*, version_id: int, by: User, reason: str) -> InterpretationVersion:
     """A new draft after a decision: what the analyst stated comes along, no confirmation by a reviewer ever does."""
-    if not reason.strip():
+    reason = bounded(reason, field="reason")
+    if not reason:
         raise BadInput("revision.no_reason", "Say what is to be revised.", field="reason")
     with unit_of_work():
         earlier = locked(version_id)
         permissions.require(by, earlier, Action.REVISE)
-        interpretation = Interpretation.objects.select_for_update().get(pk=earlier.interpretation_id)
+        interpretation = Interpretation.objects.select_for_update(no_key=True).get(pk=earlier.interpretation_id)
         last = interpretation.versions.order_by("-number").first()
         if last.pk != earlier.pk:
             raise NotPossible(
@@ -507,6 +512,6 @@ def revise(*, version_id: int, by: User, reason: str) -> InterpretationVersion:
             by=by,
             subject=subject_of(version),
             facts={"version": version.number, "revises": earlier.number},
-            reason=reason.strip(),
+            reason=reason,
         )
     return version

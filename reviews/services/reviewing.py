@@ -25,10 +25,12 @@ from reviews.models import (
     Verdict,
     Withdrawal,
 )
+from reviews.services import second_reading
 from reviews.services.drafts import label_of, locked, subject_of
 from reviews.transitions import WITH_REVIEWER, Action, State, next_state
 from spectra.models import ContributionKind
 from spectra.services.receiving import contribute
+from spectra.services.texts import bounded
 
 
 def take(*, version_id: int, by: User) -> InterpretationVersion:
@@ -101,7 +103,7 @@ def open_point(*, version_id: int, point_id: int, by: User) -> ReviewRead:
 
 def judge_point(*, version_id: int, point_id: int, by: User, judgement: str, comment: str) -> ReviewRead:
     """Agree or disagree with a point that was opened. A disagreement, or an override, needs a comment."""
-    comment = comment.strip()
+    comment = bounded(comment, field="comment")
     with unit_of_work():
         version = locked(version_id)
         permissions.require(by, version, Action.OPEN_POINT)
@@ -144,7 +146,7 @@ def judge_point(*, version_id: int, point_id: int, by: User, judgement: str, com
 
 def answer_disagreement(*, version_id: int, point_id: int, by: User, answer: str) -> ReviewRead:
     """The analyst's written answer to a reviewer's disagreement."""
-    answer = answer.strip()
+    answer = bounded(answer, field="answer")
     with unit_of_work():
         version = locked(version_id)
         permissions.require(by, version, Action.ANSWER)
@@ -170,7 +172,7 @@ def answer_disagreement(*, version_id: int, point_id: int, by: User, answer: str
 
 def settle_disagreement(*, version_id: int, point_id: int, by: User, settlement: str) -> ReviewRead:
     """The reviewer writes how an answered disagreement was settled; without an answer there is nothing to settle."""
-    settlement = settlement.strip()
+    settlement = bounded(settlement, field="settlement")
     with unit_of_work():
         version = locked(version_id)
         permissions.require(by, version, Action.OPEN_POINT)
@@ -207,6 +209,7 @@ def _disagreement(version: InterpretationVersion, point_id: int) -> ReviewRead:
 
 def approve(*, version_id: int, by: User, proof: SigningProof, content_hash: str, comment: str = "") -> Decision:
     """Approve over the hash that was shown: every point opened and judged, every disagreement settled."""
+    comment = bounded(comment, field="comment")
     with unit_of_work():
         version = locked(version_id)
         state = permissions.require(by, version, Action.APPROVE)
@@ -228,7 +231,7 @@ def reject(
         _judge_hash(version, content_hash)
         keys = set(version.points.values_list("key", flat=True)) | {""}
         given = [
-            {"point": reason.get("point", ""), "text": reason.get("text", "").strip()}
+            {"point": reason.get("point", ""), "text": bounded(reason.get("text", ""), field="reason")}
             for reason in reasons
             if reason.get("text", "").strip()
         ]
@@ -282,7 +285,7 @@ def _decide(
         verdict=verdict,
         by=by,
         at=timezone.now(),
-        comment=comment.strip(),
+        comment=comment,
         reasons=reasons,
         signature=signature,
     )
@@ -297,14 +300,16 @@ def _decide(
             "content_hash": version.content_hash,
             "conclusion": version.conclusion,
             "reasons": reasons,
+            "decided_at": decision.at,
+            "review_sha256": second_reading.digest_of_decision(decision),
         },
-        reason=comment.strip(),
+        reason=comment,
     )
     return decision
 
 
 def _supersede_earlier(version: InterpretationVersion, by: User) -> None:
-    earlier = version.interpretation.versions.select_for_update().filter(state=State.APPROVED).first()
+    earlier = version.interpretation.versions.select_for_update(no_key=True).filter(state=State.APPROVED).first()
     if earlier is None:
         return
     earlier.state = next_state(State(earlier.state), Action.SUPERSEDE)
@@ -319,11 +324,12 @@ def _supersede_earlier(version: InterpretationVersion, by: User) -> None:
 
 def withdraw(*, version_id: int, by: User, proof: SigningProof, content_hash: str, reason: str) -> Withdrawal:
     """QA takes an approved version out of effect, with a reason and a signature; it stays readable for ever."""
+    reason = bounded(reason, field="reason")
     with unit_of_work():
         version = locked(version_id)
         state = permissions.require(by, version, Action.WITHDRAW)
         _judge_hash(version, content_hash)
-        if not reason.strip():
+        if not reason:
             raise BadInput("withdrawal.no_reason", "Say why the approved version is withdrawn.", field="reason")
         signature = signing.sign(
             proof=proof,
@@ -335,7 +341,7 @@ def withdraw(*, version_id: int, by: User, proof: SigningProof, content_hash: st
             label=label_of(version),
         )
         withdrawal = Withdrawal.objects.create(
-            version=version, by=by, at=timezone.now(), reason=reason.strip(), signature=signature
+            version=version, by=by, at=timezone.now(), reason=reason, signature=signature
         )
         version.state = state
         version.save(update_fields=["state"])
@@ -343,7 +349,12 @@ def withdraw(*, version_id: int, by: User, proof: SigningProof, content_hash: st
             Event.INTERPRETATION_WITHDRAWN,
             by=by,
             subject=subject_of(version),
-            facts={"version": version.number, "content_hash": version.content_hash},
-            reason=reason.strip(),
+            facts={
+                "version": version.number,
+                "content_hash": version.content_hash,
+                "withdrawn_at": withdrawal.at,
+                "review_sha256": second_reading.digest_of_withdrawal(withdrawal),
+            },
+            reason=reason,
         )
     return withdrawal

@@ -10,6 +10,7 @@ from django.views.decorators.http import require_GET
 
 from labsite.accounts.models import Role, User
 from labsite.accounts.permissions import page_for
+from labsite.accounts.selectors import recent_resets
 from labsite.trail import selectors as trail
 from reviews import presenting, selectors
 from reviews.models import InterpretationVersion
@@ -29,7 +30,7 @@ def today(request: HttpRequest) -> HttpResponse:
     if user.has_role(Role.ANALYST):
         sections += [_answers(), _sent_back(), _drafts(), _in_analysis(), _waiting_for_files()]
     if user.has_role(Role.QA_MANAGER):
-        sections += [_trail_status(), _ageing(), _overrides(), _decided()]
+        sections += [_trail_status(), _resets(), _ageing(), _overrides(), _decided()]
     if user.has_role(Role.METHOD_OWNER, Role.QA_MANAGER):
         sections += [_approvals(user), _expiring()]
     if user.has_role(Role.LAB_ADMINISTRATOR):
@@ -192,6 +193,28 @@ def _trail_status() -> dict[str, object]:
         "why": why,
     }
     return {"title": "The trail", "rows": [row], "empty": ""}
+
+
+def _resets() -> dict[str, object]:
+    rows = [
+        {
+            "label": item.person.printed_name,
+            "url": reverse("trail:entry", args=[item.seq]),
+            "material": f"by {item.by.printed_name if item.by else 'the system'}, {selectors.utc(item.at)}",
+            "state": "",
+            "age": "",
+            "due": None,
+            "late": False,
+            "priority": "",
+            "why": item.reason,
+        }
+        for item in recent_resets(days=7)
+    ]
+    return {
+        "title": "Passwords reset in the last 7 days",
+        "rows": rows,
+        "empty": "No password was reset in the last 7 days.",
+    }
 
 
 def _decided() -> dict[str, object]:

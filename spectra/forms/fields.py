@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 
 from django import forms
 
@@ -26,6 +26,20 @@ class Moment(forms.DateTimeField):
     def __init__(self, **kwargs):
         widget = forms.DateTimeInput(attrs={"type": "datetime-local"}, format="%Y-%m-%dT%H:%M")
         super().__init__(widget=widget, **kwargs)
+
+
+class SelectSome(forms.Select):
+    """A choice of which some options are shown but cannot be chosen."""
+
+    def __init__(self, *, kept_back: Iterable[str], **kwargs):
+        super().__init__(**kwargs)
+        self.kept_back = frozenset(kept_back)
+
+    def create_option(self, name, value, *args, **kwargs):
+        option = super().create_option(name, value, *args, **kwargs)
+        if str(value) in self.kept_back:
+            option["attrs"]["disabled"] = True
+        return option
 
 
 class Code(forms.RegexField):

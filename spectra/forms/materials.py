@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 from django import forms
+from django.forms.utils import ErrorDict
 
 from spectra import selectors_master as selectors
 from spectra.models import MaterialVersion, PhaseChoices, Reference, ReviewMode, WatchList
+from spectra.services.master import OFFERED_REVIEW_MODES
 
-from .fields import CHOOSE, CODE_HINT, LONGEST_TEXT, Code, Lines, Sectioned, text_area
+from .fields import CHOOSE, CODE_HINT, LONGEST_TEXT, Code, Lines, Sectioned, SelectSome, text_area
 
 
 class MaterialForm(Sectioned):
@@ -96,7 +100,16 @@ class MaterialForm(Sectioned):
         widget=text_area(),
         help_text="When does identity by infrared comply? In the words of the specification.",
     )
-    review_mode = forms.ChoiceField(label="Second reading", choices=ReviewMode.choices, initial=ReviewMode.OPEN)
+    review_mode = forms.ChoiceField(
+        label="Second reading",
+        choices=[
+            (mode.value, mode.label if mode in OFFERED_REVIEW_MODES else f"{mode.label} (not offered yet)")
+            for mode in ReviewMode
+        ],
+        initial=ReviewMode.OPEN,
+        widget=SelectSome(kept_back={mode.value for mode in ReviewMode if mode not in OFFERED_REVIEW_MODES}),
+        help_text="The blind reading is not offered yet.",
+    )
     not_separable_from = Lines(
         label="Cannot be told apart from", help_text="Materials with the same infrared spectrum."
     )
@@ -129,6 +142,19 @@ class MaterialForm(Sectioned):
             numbers.append((held, f"{held} (no approved edition)"))
         self.fields["procedure_number"].choices = CHOOSE + numbers
         self.fields["watch_list"].queryset = selectors.watch_lists_to_choose()
+
+    def leave_unjudged(self) -> None:
+        """Show what was typed without judging it: nobody asked to save it yet."""
+        self._errors = ErrorDict()
+
+    def take_groups(self, found: Iterable[str]) -> list[str]:
+        """Tick `found` under Expected before anything is judged; returns the names of those newly ticked."""
+        choices = dict(self.fields["expected_groups"].choices)
+        ticked = self.data.getlist("expected_groups")
+        new = [one for one in found if one in choices and one not in ticked]
+        self.data = self.data.copy()
+        self.data.setlist("expected_groups", [*ticked, *new])
+        return [choices[one] for one in new]
 
     def clean(self):
         cleaned = super().clean()

@@ -37,6 +37,11 @@ class ReferenceForm(Sectioned):
             "Needed only when reading it asks for one of these.",
             ("block_index", "x_unit", "ordinate", "columns"),
         ),
+        (
+            "If the file's header is wrong",
+            "What its header states is held against what you state: the state of the sample, resolution, date.",
+            ("header_wrong", "header_contradicted"),
+        ),
     )
 
     file = forms.FileField(
@@ -105,6 +110,14 @@ class ReferenceForm(Sectioned):
         help_text="Counted from 1, where column 1 holds the wavenumbers.",
     )
 
+    header_wrong = forms.BooleanField(label="The file's header is wrong", required=False)
+    header_contradicted = forms.CharField(
+        label="because",
+        max_length=300,
+        required=False,
+        help_text="Kept with the reference, shown to whoever approves it, and recorded.",
+    )
+
     def __init__(self, *args, **kwargs):
         super().__init__(*args, **kwargs)
         self.fields["instrument"].queryset = selectors.instruments_in_service()
@@ -130,6 +143,11 @@ class ReferenceForm(Sectioned):
             for name in ATR_FIELDS:
                 if cleaned.get(name) is not None:
                     self.add_error(name, "Leave it empty: the chosen technique has no crystal.")
+        wrong, why = cleaned.get("header_wrong"), (cleaned.get("header_contradicted") or "").strip()
+        if wrong and not why:
+            self.add_error("header_contradicted", "Say why the header is wrong.")
+        if why and not wrong:
+            self.add_error("header_wrong", "Tick this too, or take the reason away.")
         return cleaned
 
     def values(self) -> dict[str, object]:
@@ -147,7 +165,8 @@ class ReferenceForm(Sectioned):
         )
         values: dict[str, object] = {name: data[name] for name in names}
         values["instrument_id"] = data["instrument"].pk if data["instrument"] else None
-        values["answers"] = {name: data[name] for name in ("x_unit", "ordinate", "columns") if data[name]}
+        answered = ("x_unit", "ordinate", "columns", "header_contradicted")
+        values["answers"] = {name: data[name] for name in answered if data[name]}
         if data["block_index"]:
             values["block_index"] = data["block_index"] - 1
         return values

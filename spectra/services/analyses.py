@@ -31,6 +31,7 @@ from spectra.models import (
     ReferenceMatch,
     Spectrum,
 )
+from spectra.services.locking import locked_examination
 from spectra.subjects import examination_subject
 
 
@@ -44,6 +45,10 @@ def worker_name() -> str:
 
 def _subject(analysis: Analysis) -> Subject:
     return examination_subject(analysis.spectrum.examination)
+
+
+def _examination_of(analysis_id: int) -> int | None:
+    return Analysis.objects.filter(pk=analysis_id).values_list("spectrum__examination_id", flat=True).first()
 
 
 def queue_analysis(*, spectrum: Spectrum, by: User) -> Analysis:
@@ -139,6 +144,7 @@ def _beat(analysis_id: int, attempt: int, step: str, fraction: float) -> None:
 def _finish(analysis_id: int, attempt: int, outcome: computing.Outcome) -> bool:
     curves_sha256 = store.put(outcome.curves)
     with unit_of_work():
+        locked_examination(_examination_of(analysis_id))  # what is drafted from the result locks below it
         analysis = (
             _mine(analysis_id, attempt)
             .select_for_update(of=("self",))
@@ -241,6 +247,7 @@ def retry(*, analysis_id: int, by: User) -> Analysis:
     """Queue a failed analysis again; the failed row stays as it is."""
     permissions.require_analyst(by)
     with unit_of_work():
+        locked_examination(_examination_of(analysis_id))
         failed = (
             Analysis.objects.select_for_update(of=("self",))
             .select_related("spectrum__examination__delivery__material_version", "spectrum__upload")

@@ -107,7 +107,13 @@ def approve(*, kind: str, pk: int, by: User, proof: SigningProof, content_hash: 
                 "approval.changed", "The record changed since this page was shown.", remedy="Read it again, then sign."
             )
         signature = signing.sign(
-            proof=proof, by=by, kind=kind, subject_id=str(row.pk), content_hash=actual, meaning=Meaning.APPROVED
+            proof=proof,
+            by=by,
+            kind=kind,
+            subject_id=str(row.pk),
+            content_hash=actual,
+            meaning=Meaning.APPROVED,
+            label=str(row),
         )
         _retire_earlier(kind, row, by)
         row.state = ApprovalState.APPROVED

@@ -22,6 +22,7 @@ from spectra.models import (
     Qualification,
     RawFile,
 )
+from spectra.services.texts import bounded
 
 
 def register_instrument(
@@ -90,6 +91,7 @@ def record_check(
         raise BadInput("check.later", "The check lies in the future.", field="performed_at")
     if valid_until <= performed_at:
         raise BadInput("check.valid_until", "It must be valid beyond the moment it was made.", field="valid_until")
+    note = bounded(note, field="note")
     sha256 = store.put(data) if data else ""
     with unit_of_work():
         accessory = Accessory.objects.select_related("instrument").filter(pk=accessory_id).first()
@@ -106,7 +108,7 @@ def record_check(
             valid_until=valid_until,
             verdict=verdict,
             raw_file=raw_file,
-            note=note.strip(),
+            note=note,
             recorded_by=by,
             recorded_at=timezone.now(),
         )
@@ -121,7 +123,7 @@ def record_check(
                 "verdict": verdict,
                 "sha256": sha256,
             },
-            reason=note.strip(),
+            reason=note,
         )
     return check
 

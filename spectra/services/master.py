@@ -21,6 +21,8 @@ from spectra.core.errors import CoreError
 from spectra.core.params import MethodParams
 from spectra.core.types import SpectrumBlock
 from spectra.core.version import CORE_VERSION
+from spectra.days import today
+from spectra.header_check import contradictions
 from spectra.models import (
     ApprovalState,
     GroupTable,
@@ -30,6 +32,7 @@ from spectra.models import (
     Procedure,
     RawFile,
     Reference,
+    ReviewMode,
     WatchItem,
     WatchList,
 )
@@ -47,6 +50,10 @@ PROCEDURE_FIELDS = (
     " solid_state_repeat method_id"
 ).split()
 
+
+HEADER_CONTRADICTED = "header_contradicted"  # among a reference's answers: why the file's own header is wrong
+# What the second reading of a material can be: the blind one needs pages that are not there.
+OFFERED_REVIEW_MODES = (ReviewMode.OPEN,)
 
 REFERENCE_FIELDS = (
     "standard_lot certificate standard_received_on standard_expires_on spectrum_valid_until technique phase"
@@ -74,6 +81,17 @@ def _judge_chemistry(values: Mapping[str, object]) -> None:
             raise BadInput("material.unknown_group", "No group is called " + ", ".join(unknown) + ".", field=field)
 
 
+def _judge_review_mode(values: Mapping[str, object]) -> None:
+    mode = values.get("review_mode", ReviewMode.OPEN)
+    if mode in ReviewMode.values and mode not in OFFERED_REVIEW_MODES:
+        raise BadInput(
+            "material.review_mode_not_offered",
+            "The blind second reading is not offered yet.",
+            remedy="Choose the open one.",
+            field="review_mode",
+        )
+
+
 def draft_material(*, by: User, code: str, values: Mapping[str, object]) -> MaterialVersion:
     """A new draft version of a material; the material itself is made with its first version."""
     permissions.require_method_owner(by)
@@ -84,6 +102,7 @@ def draft_material(*, by: User, code: str, values: Mapping[str, object]) -> Mate
     if not str(values.get("name", "")).strip():
         raise BadInput("material.no_name", "Give the declared name.", field="name")
     _judge_chemistry(values)
+    _judge_review_mode(values)
     with unit_of_work():
         material, _ = Material.objects.get_or_create(code=code, defaults={"created_at": timezone.now()})
         material = Material.objects.select_for_update().get(pk=material.pk)
@@ -108,6 +127,7 @@ def change_material(*, pk: int, by: User, values: Mapping[str, object], reason: 
     permissions.require_method_owner(by)
     _only(values, MATERIAL_FIELDS)
     _judge_chemistry(values)
+    _judge_review_mode(values)
     with unit_of_work():
         version = MaterialVersion.objects.select_for_update().filter(pk=pk).first()
         if version is None:
@@ -153,21 +173,29 @@ def draft_procedure(*, by: User, number: str, values: Mapping[str, object]) -> P
     return row
 
 
-def draft_method(*, by: User, name: str, parameters: Mapping[str, object] | None = None) -> MethodVersion:
-    """A new version of the numeric parameters; without any, the ones this code version ships with."""
+def draft_method(
+    *, by: User, name: str, parameters: Mapping[str, object] | None = None, refuse_same: bool = False
+) -> MethodVersion:
+    """A new version of the numeric parameters; without any, the ones this code version ships with.
+
+    `refuse_same`: raise NotPossible where a version with the very same parameters exists already.
+    """
     permissions.require_method_owner(by)
     try:
         params = MethodParams.from_dict(dict(parameters)) if parameters is not None else MethodParams()
     except (CoreError, ValueError, TypeError) as error:
         raise BadInput("method.parameters", f"These parameters are not usable: {error}", field="parameters") from None
     values = params.to_dict()
+    digest = hashlib.sha256(rfc8785.dumps(values)).hexdigest()
     with unit_of_work():
+        if refuse_same:
+            _judge_new(MethodVersion, digest, code="method.same", what="the very same parameters")
         last = MethodVersion.objects.aggregate(last=Max("number"))["last"] or 0
         row = MethodVersion.objects.create(
             number=last + 1,
             name=name.strip(),
             parameters=values,
-            digest=hashlib.sha256(rfc8785.dumps(values)).hexdigest(),
+            digest=digest,
             core_version=CORE_VERSION,
             author=by,
             created_at=timezone.now(),
@@ -176,14 +204,19 @@ def draft_method(*, by: User, name: str, parameters: Mapping[str, object] | None
     return row
 
 
-def load_group_table(*, by: User, text: str) -> GroupTable:
-    """A new draft version of the group table from its text; refused with the row when it does not hold together."""
+def load_group_table(*, by: User, text: str, refuse_same: bool = False) -> GroupTable:
+    """A new draft version of the group table from its text; refused with the row when it does not hold together.
+
+    `refuse_same`: raise NotPossible where a version that says the very same exists already.
+    """
     permissions.require_method_owner(by)
     try:
         table = group_table.load(text)
     except CoreError as error:
         raise BadInput(error.problem.code, error.problem.message, remedy=error.problem.remedy, field="text") from None
     with unit_of_work():
+        if refuse_same:
+            _judge_new(GroupTable, table.digest, code="group_table.same", what="the very same table")
         last = GroupTable.objects.aggregate(last=Max("number"))["last"] or 0
         row = GroupTable.objects.create(
             number=last + 1, text=text, digest=table.digest, author=by, created_at=timezone.now()
@@ -195,6 +228,20 @@ def load_group_table(*, by: User, text: str) -> GroupTable:
             facts={"digest": table.digest, "groups": len(table.groups)},
         )
     return row
+
+
+def _judge_new(model: type[MethodVersion] | type[GroupTable], digest: str, *, code: str, what: str) -> None:
+    """Refuse a second version of what stands in a draft or an approved one already."""
+    same = model.objects.filter(digest=digest).exclude(state=ApprovalState.RETIRED).order_by("-number").first()
+    if same is None:
+        return
+    said = str(same)
+    raise NotPossible(
+        code,
+        f"{said[:1].upper()}{said[1:]} holds {what} already; it is {same.get_state_display()}.",
+        remedy="Use that one." if same.state == ApprovalState.APPROVED else "Have that draft approved.",
+        version=same.number,
+    )
 
 
 def register_reference(
@@ -237,6 +284,7 @@ def register_reference(
             line=problem.line if problem else None,
             question=problem.question if problem else None,
         )
+    against_header = _judge_header(block, values)
     sha256 = store.put(data)
     with unit_of_work():
         if Reference.objects.filter(code=code).exists():
@@ -261,9 +309,33 @@ def register_reference(
             Event.REFERENCE_REGISTERED,
             by=by,
             subject=subject_of("reference", row),
-            facts={"file": row.file_name, "sha256": sha256, "standard_lot": row.standard_lot},
+            facts={"file": row.file_name, "sha256": sha256, "standard_lot": row.standard_lot}
+            | ({"against_the_header": against_header} if against_header else {}),
+            reason=str(row.answers.get(HEADER_CONTRADICTED, "")),
         )
     return row
+
+
+def _judge_header(block: SpectrumBlock, values: Mapping[str, object]) -> list[str]:
+    """Refuse what the file's own header contradicts, unless the person says why the header is wrong; what it says."""
+    found = contradictions(block.headers, values, today=today())
+    why = str((values.get("answers") or {}).get(HEADER_CONTRADICTED, "")).strip()
+    if found and not why:
+        text = "; ".join(one.text for one in found)
+        raise BadInput(
+            "reference.header_contradicts",
+            f"{text[:1].upper()}{text[1:]}.",
+            remedy="Correct what you stated, or say below why the file's header is wrong.",
+            field=found[0].field,
+        )
+    if why and not found:
+        raise BadInput(
+            "reference.header_agrees",
+            "The file's header contradicts nothing that you stated.",
+            remedy="Leave this empty.",
+            field=HEADER_CONTRADICTED,
+        )
+    return [one.text for one in found]
 
 
 def draft_watch_list(*, by: User, code: str, title: str, items: Sequence[tuple[str, int]]) -> WatchList:

@@ -30,7 +30,9 @@ from spectra.models import (
 )
 from spectra.reading import read_options
 from spectra.services.analyses import queue_analysis
+from spectra.services.locking import locked_examination
 from spectra.services.receiving import contribute
+from spectra.services.texts import bounded
 from spectra.subjects import examination_subject
 
 # The roles whose spectra show the sample; a background or a blank is kept and looked at, not interpreted.
@@ -73,8 +75,15 @@ def _judge_facts(facts: MeasurementFacts) -> None:
             raise BadInput("spectrum.unknown_person", "There is no such account.", field=field)
     if facts.resolution_cm1 is not None and not 0 < facts.resolution_cm1 < 1000:
         raise BadInput("spectrum.resolution", "Give the resolution in cm⁻¹, above 0.", field="resolution_cm1")
+    bounded(facts.background_note, field="background_note", longest=_longest("background_note"))
+    bounded(facts.already_processed, field="already_processed", longest=_longest("already_processed"))
+    bounded(facts.measured_at_text, field="measured_at_text", longest=_longest("measured_at_text"))
     if facts.scans is not None and not 0 < facts.scans <= 1_000_000:
         raise BadInput("spectrum.scans", "Give the number of scans, 1 or more.", field="scans")
+
+
+def _longest(column: str) -> int:
+    return Spectrum._meta.get_field(column).max_length
 
 
 def _judge_role(examination: Examination, role: str) -> None:
@@ -100,7 +109,7 @@ def bring_file(*, examination_id: int, by: User, file_name: str, data: bytes, fa
     result = formats.read(data, read_options({}, technique))
     sha256 = store.put(data)
     with unit_of_work():
-        examination = Examination.objects.select_for_update().get(pk=examination_id)
+        examination = locked_examination(examination_id)
         hooks.evidence_may_change(examination, by)
         _judge_role(examination, facts.role)
         known = Upload.objects.filter(examination=examination, raw_file__sha256=sha256)
@@ -150,7 +159,7 @@ def answer_upload(*, upload_id: int, by: User, answers: Mapping[str, object], fa
     told = {**upload.answers, **{key: value for key, value in answers.items() if value}}
     result = formats.read(store.get(upload.raw_file.sha256), read_options(told, technique))
     with unit_of_work():
-        examination = Examination.objects.select_for_update().get(pk=upload.examination_id)
+        examination = locked_examination(upload.examination_id)
         upload = Upload.objects.select_for_update().get(pk=upload_id)
         hooks.evidence_may_change(examination, by)
         if upload.state != UploadState.NEEDS_ANSWER:
@@ -287,13 +296,17 @@ def finding_json(finding) -> dict[str, object]:
     }
 
 
+# Common practice: high-resolution gas work ends near 0.01 cm-1, and nothing coarser than 64 cm-1 shows a band.
+LOWEST_RESOLUTION_CM1, HIGHEST_RESOLUTION_CM1 = 0.01, 64.0
+
+
 def declared_resolution_cm1(block: SpectrumBlock) -> float | None:
-    """RESOLUTION of the file's header, when it is a plain positive number."""
+    """RESOLUTION of the file's header, when it is a number that a resolution of mid-infrared spectra can be."""
     try:
         value = float(block.headers.get("RESOLUTION", "").split()[0])
     except (ValueError, IndexError):
         return None
-    return value if 0 < value < 1000 else None
+    return value if LOWEST_RESOLUTION_CM1 <= value <= HIGHEST_RESOLUTION_CM1 else None
 
 
 def _measured_at(block: SpectrumBlock) -> str:
@@ -306,7 +319,7 @@ def _measured_at(block: SpectrumBlock) -> str:
 def change_role(*, spectrum_id: int, by: User, role: str, reason: str) -> Spectrum:
     """Exclude a spectrum, take it in again, or make another one decisive; always with a reason, always visible."""
     permissions.require_analyst(by)
-    reason = reason.strip()
+    reason = bounded(reason, field="reason")
     if role not in SpectrumRole.values:
         raise BadInput("spectrum.role", "That is not a role a spectrum can have.", field="role")
     if not reason:
@@ -315,7 +328,7 @@ def change_role(*, spectrum_id: int, by: User, role: str, reason: str) -> Spectr
         spectrum = Spectrum.objects.select_related("upload", "examination").filter(pk=spectrum_id).first()
         if spectrum is None:
             raise NotVisible("spectrum.unknown", "There is no such spectrum.")
-        examination = Examination.objects.select_for_update().get(pk=spectrum.examination_id)
+        examination = locked_examination(spectrum.examination_id)
         spectrum = Spectrum.objects.select_for_update().get(pk=spectrum_id)
         hooks.evidence_may_change(examination, by)
         old = spectrum.role
@@ -347,7 +360,11 @@ def _record_role(spectrum: Spectrum, by: User, old: str, reason: str) -> None:
         event,
         by=by,
         subject=examination_subject(spectrum.examination),
-        facts={"file": spectrum.upload.file_name, "block": spectrum.block_index},
+        facts={
+            "file": spectrum.upload.file_name,
+            "sha256": spectrum.upload.raw_file.sha256,
+            "block": spectrum.block_index,
+        },
         old={"role": old},
         new={"role": spectrum.role},
         reason=reason,

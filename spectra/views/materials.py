@@ -148,13 +148,15 @@ def structure(request: HttpRequest) -> HttpResponse:
     """How a structure is read: its drawing, formula and groups, as a part of the form's page."""
     text = (request.GET.get("smiles") or request.GET.get("repeat_unit") or "").strip()
     return render(
-        request, "spectra/_structure.html", {"structure": selectors_master.structure_facts(text), "asked": True}
+        request,
+        "spectra/_structure.html",
+        {"structure": selectors_master.structure_facts(text), "asked": True, "may_take": True},
     )
 
 
 def _attempt(request: HttpRequest, form: MaterialForm, act: Callable[[], object]) -> tuple[object | None, int]:
-    """As `attempt`; but the button that only checks the structure saves nothing."""
-    return (None, 200) if "check" in request.POST else attempt(form, act)
+    """As `attempt`; but the buttons that check the structure and take its groups save nothing."""
+    return (None, 200) if {"check", "take_groups"} & set(request.POST) else attempt(form, act)
 
 
 def _drafted(request: HttpRequest, version: MaterialVersion) -> HttpResponse:
@@ -170,8 +172,12 @@ def _to_version(version: MaterialVersion) -> list[tuple[str, str]]:
 
 
 def _material_form(request, form, status, title, crumbs, intro="") -> HttpResponse:
-    checking = "check" in request.POST
     text = (form["smiles"].value() or form["repeat_unit"].value() or "").strip()
+    structure = selectors_master.structure_facts(text)
+    taking = "take_groups" in request.POST
+    taken = form.take_groups(structure.group_ids) if taking else []
+    if taking or "check" in request.POST:
+        form.leave_unjudged()
     return form_page(
         request,
         form,
@@ -181,8 +187,11 @@ def _material_form(request, form, status, title, crumbs, intro="") -> HttpRespon
         crumbs=crumbs,
         intro=intro,
         template="spectra/material_form.html",
-        structure=selectors_master.structure_facts(text),
-        asked=checking,
+        structure=structure,
+        asked=taking or "check" in request.POST,
+        may_take=True,
+        taking=taking,
+        taken=taken,
         no_groups=not selectors_master.groups_to_choose(),
         no_procedures=not selectors_master.procedures_to_choose(),
     )

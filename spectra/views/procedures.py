@@ -124,7 +124,7 @@ def method(request: HttpRequest, pk: int) -> HttpResponse:
 @require_POST
 @owners_only
 def load_method(request: HttpRequest) -> HttpResponse:
-    row = master.draft_method(by=request.user, name=selectors_master.SHIPPED_METHOD_NAME)
+    row = master.draft_method(by=request.user, name=selectors_master.SHIPPED_METHOD_NAME, refuse_same=True)
     messages.success(request, DRAFTED)
     return redirect("spectra:method", row.pk)
 
@@ -138,7 +138,10 @@ def new_method(request: HttpRequest, pk: int | None = None) -> HttpResponse:
     row, status = attempt(
         form,
         lambda: master.draft_method(
-            by=request.user, name=form.cleaned_data["name"], parameters=form.cleaned_data["parameters"]
+            by=request.user,
+            name=form.cleaned_data["name"],
+            parameters=form.cleaned_data["parameters"],
+            refuse_same=True,
         ),
     )
     if row is not None:
@@ -183,7 +186,7 @@ def group_table(request: HttpRequest, pk: int) -> HttpResponse:
 @require_POST
 @owners_only
 def load_group_table(request: HttpRequest) -> HttpResponse:
-    row = master.load_group_table(by=request.user, text=selectors_master.shipped_group_table())
+    row = master.load_group_table(by=request.user, text=selectors_master.shipped_group_table(), refuse_same=True)
     messages.success(request, DRAFTED)
     return redirect("spectra:group_table", row.pk)
 
@@ -193,7 +196,9 @@ def load_group_table(request: HttpRequest) -> HttpResponse:
 def new_group_table(request: HttpRequest, pk: int | None = None) -> HttpResponse:
     earlier = selectors_master.group_table_version(pk) if pk is not None else None
     form = bound(request, GroupTableForm, initial={"text": earlier.text if earlier else ""})
-    row, status = attempt(form, lambda: master.load_group_table(by=request.user, text=form.cleaned_data["text"]))
+    row, status = attempt(
+        form, lambda: master.load_group_table(by=request.user, text=form.cleaned_data["text"], refuse_same=True)
+    )
     if row is not None:
         messages.success(request, DRAFTED)
         return redirect("spectra:group_table", row.pk)

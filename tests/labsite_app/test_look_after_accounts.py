@@ -67,11 +67,46 @@ def test_an_unusable_user_name_is_refused(cast, username):
     assert refusal.value.code == "accounts.bad_username"
 
 
-@pytest.mark.parametrize(("first", "second"), [("administrator", Role.ANALYST), ("administrator", Role.REVIEWER)])
-def test_an_administrator_neither_analyses_nor_reviews(cast, first, second):
+@pytest.fixture
+def second_administrator(cast) -> User:
+    return make_person("second_administrator", roles=(Role.LAB_ADMINISTRATOR,))
+
+
+@pytest.mark.parametrize("role", [Role.ANALYST, Role.REVIEWER])
+def test_an_administrator_neither_analyses_nor_reviews(cast, second_administrator, role):
     with pytest.raises(NotPossible) as refusal:
-        services.grant_role(by=cast.administrator, user_id=cast[first].pk, role=second, reason="short of people")
+        services.grant_role(by=second_administrator, user_id=cast.administrator.pk, role=role, reason="few people")
     assert refusal.value.code == "accounts.roles_kept_apart"
+
+
+@pytest.mark.parametrize("role", [Role.QA_MANAGER, Role.METHOD_OWNER, Role.ANALYST, Role.LAB_ADMINISTRATOR])
+def test_nobody_gives_a_role_to_themselves(cast, second_administrator, role):
+    with pytest.raises(NotPossible) as refusal:
+        services.grant_role(by=cast.administrator, user_id=cast.administrator.pk, role=role, reason="few people")
+    assert refusal.value.code == "accounts.own_role" and "Another lab administrator" in refusal.value.remedy
+    assert User.objects.get(pk=cast.administrator.pk).roles == {"lab_administrator"}
+
+
+def test_whoever_administers_does_not_decide_on_the_exception_even_as_qa_manager(cast, second_administrator):
+    services.grant_role(by=second_administrator, user_id=cast.administrator.pk, role=Role.QA_MANAGER, reason="few")
+    both = User.objects.get(pk=cast.administrator.pk)
+    with pytest.raises(NotPossible) as refusal:
+        services.set_small_laboratory(by=both, allowed=True, reason="I say so")
+    assert refusal.value.code == "accounts.decides_on_own_exception"
+    assert not selectors.small_laboratory() and not LabSetting.objects.exists()
+
+
+def test_resets_of_late_are_listed_with_who_did_them(cast, second_administrator):
+    assert selectors.recent_resets() == []
+    services.reset_password(by=cast.administrator, user_id=cast.analyst.pk, reason="forgotten")
+    services.reset_password(by=second_administrator, user_id=cast.reviewer.pk, reason="lost")
+    found = [(reset.person, reset.by, reset.reason) for reset in selectors.recent_resets()]
+    assert found == [
+        (cast.reviewer, second_administrator, "lost"),
+        (cast.analyst, cast.administrator, "forgotten"),
+    ]
+    assert [reset.person for reset in selectors.recent_resets(person=cast.analyst)] == [cast.analyst]
+    assert selectors.recent_resets(days=0) == []
 
 
 def test_an_analyst_does_not_become_administrator(cast):
@@ -82,10 +117,10 @@ def test_an_analyst_does_not_become_administrator(cast):
     assert refusal.value.code == "accounts.roles_kept_apart"
 
 
-def test_a_small_laboratory_may_join_them_by_a_recorded_decision(cast):
+def test_a_small_laboratory_may_join_them_by_a_recorded_decision(cast, second_administrator):
     services.set_small_laboratory(by=cast.qa_manager, allowed=True, reason="three people")
     assert newest()["reason"] == "three people"
-    services.grant_role(by=cast.administrator, user_id=cast.administrator.pk, role=Role.ANALYST, reason="holiday")
+    services.grant_role(by=second_administrator, user_id=cast.administrator.pk, role=Role.ANALYST, reason="holiday")
     assert User.objects.get(pk=cast.administrator.pk).roles == {"lab_administrator", "analyst"}
     with pytest.raises(NotPossible) as refusal:
         services.set_small_laboratory(by=cast.qa_manager, allowed=False, reason="more people")
@@ -165,6 +200,15 @@ def test_an_account_that_does_not_exist_is_not_found(cast):
         ("x" * 257, "longer than 256"),
         ("second_analyst_", "too similar"),
         ("a" * 14, "too short"),
+        ("passwordpassword", "repeats one word"),
+        ("Password password", "repeats one word"),
+        ("password-password-2026", "repeats one word"),
+        ("sunshinesunshinesun", "repeats one word"),
+        ("123123123123123", "repeats one word"),
+        ("a" * 20, "repeats one word"),
+        ("bandledger Bandledger", "repeats one word"),
+        ("bandledger1bandledger1", "repeats one word"),
+        ("second_analyst second_analyst", "repeats one word"),
     ],
 )
 def test_a_weak_password_is_refused_beside_its_field(cast, password, why):
@@ -216,3 +260,15 @@ def test_the_first_administrator_needs_a_good_password(db, monkeypatch):
     with pytest.raises(CommandError, match="too short"):
         call_command("first_administrator", username="first", printed_name="First")
     assert not User.objects.exists() and not TrailEntry.objects.exists()
+
+
+def test_without_a_terminal_the_command_to_use_is_named(db, monkeypatch):
+    def no_terminal(prompt: str) -> str:
+        raise EOFError
+
+    monkeypatch.delenv("BANDLEDGER_FIRST_PASSWORD", raising=False)
+    monkeypatch.setattr("builtins.input", no_terminal)
+    with pytest.raises(CommandError) as refusal:
+        call_command("first_administrator", if_none=True)
+    assert "python3 manage.py first_administrator --username … --printed-name …" in str(refusal.value)
+    assert "BANDLEDGER_FIRST_PASSWORD" in str(refusal.value)

@@ -31,6 +31,18 @@ def test_a_new_person_can_be_opened_and_can_sign_in(cast, administrator):
     assert "New Comer" in listed and "temporary password" in listed
 
 
+def test_nobody_is_offered_to_give_themselves_a_role(cast, administrator):
+    own, other = (
+        administrator.get(reverse("accounts:person", args=[person.pk])).content.decode()
+        for person in (cast.administrator, cast.analyst)
+    )
+    assert "Give this role" not in own and "Give this role" in other
+    answer = administrator.post(
+        reverse("accounts:grant_role", args=[cast.administrator.pk]), {"role": "qa_manager", "reason": "few people"}
+    )
+    assert answer.status_code == 422 and "Nobody gives a role to themselves." in answer.content.decode()
+
+
 def test_a_taken_user_name_is_refused_beside_its_field_and_nothing_is_lost(cast, administrator):
     answer = administrator.post(
         reverse("accounts:new_person"), {"username": "ANALYST", "printed_name": "Somebody New", "roles": ["analyst"]}

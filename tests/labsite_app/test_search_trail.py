@@ -181,8 +181,26 @@ def test_no_cell_is_taken_for_a_formula(cast, start):
     assert row["reason"].startswith("'")
 
 
-def test_plain_cells_stay_as_they_are():
-    assert exports.safe_cell("S-001") == "S-001"
+@pytest.mark.parametrize(
+    ("text", "safe"),
+    [
+        ("a;=1+1", "a;'=1+1"),
+        ("a; \t@SUM(1)", "a; \t'@SUM(1)"),
+        ('a;"=1+1', "a;\"'=1+1"),
+        ("a\t+1", "a\t'+1"),
+        ("a\r\n-1", "a\r\n'-1"),
+        ("  =1+1", "  '=1+1"),
+        ("a,=1;=2", "a,'=1;'=2"),
+        ("a;\u00a0\uff1d1", "a;\u00a0'\uff1d1"),
+    ],
+)
+def test_no_piece_of_a_cell_is_taken_for_a_formula_where_another_separator_holds(text, safe):
+    assert exports.safe_cell(text) == safe
+
+
+@pytest.mark.parametrize("text", ["S-001", "x: -3; y: 4", "a - b", "1 + 1 = 2", "", "name@laboratory"])
+def test_plain_cells_stay_as_they_are(text):
+    assert exports.safe_cell(text) == text
 
 
 def test_the_page_of_the_verification_tells_both_outcomes(history, as_person):

@@ -8,6 +8,7 @@ from datetime import timedelta
 import pytest
 from django.conf import settings
 from django.db import IntegrityError, connection, transaction
+from django.urls import reverse
 from django.utils import timezone
 
 from labsite.accounts import services as accounts
@@ -81,6 +82,25 @@ def test_too_many_wrong_passwords_lock_signing_even_for_the_right_one(cast):
         assert refusal.value.code == "signing.locked_out"
     assert TrailEntry.objects.filter(event="signature.failed").count() == settings.AXES_FAILURE_LIMIT
     prove(cast.analyst)
+
+
+def test_wrong_sign_ins_at_a_shared_computer_do_not_stop_a_signature_there(cast, client):
+    page = reverse("accounts:sign_in")
+    for username in ("qa_manager", "signing qa_manager", "SIGNING qa_manager"):
+        for _ in range(settings.AXES_FAILURE_LIMIT + 1):
+            answer = client.post(page, {"username": username, "password": WRONG_PASSWORD})
+        assert answer.status_code == 403 and "locked for a while" in answer.content.decode()
+    assert sign(cast.qa_manager).signer == cast.qa_manager
+
+
+def test_wrong_signatures_lock_no_sign_in(cast, client):
+    for _ in range(settings.AXES_FAILURE_LIMIT + 1):
+        with pytest.raises((BadInput, NotAllowed)):
+            prove(cast.reviewer, WRONG_PASSWORD)
+    answer = client.post(reverse("accounts:sign_in"), {"username": "reviewer", "password": PASSWORD})
+    assert answer.status_code == 302
+    with pytest.raises(NotAllowed):  # and signing in does not unlock signing
+        prove(cast.reviewer)
 
 
 def test_a_right_password_forgets_earlier_failures(cast):

@@ -218,6 +218,20 @@ def test_a_temporary_password_leads_to_a_new_one_before_anything_else(cast, clie
     assert client.get(PROFILE).status_code == 200
 
 
+def test_a_person_learns_who_reset_their_password_and_is_not_told_again(cast, client):
+    services.reset_password(by=cast.administrator, user_id=cast.analyst.pk, reason="not asked for")
+    _, temporary = services.reset_password(by=cast.administrator, user_id=cast.analyst.pk, reason="locked out")
+    page = client.post(SIGN_IN, {"username": "analyst", "password": temporary}, follow=True).content.decode()
+    assert page.count("Your password was reset by Lab administrator on ") == 2
+    assert "Reason: not asked for." in page and "Reason: locked out." in page
+    new = "another heron over slow water"
+    change = reverse("accounts:change_password")
+    client.post(change, {"current_password": temporary, "new_password": new, "new_password_again": new})
+    client.post(reverse("accounts:sign_out"))
+    again = client.post(SIGN_IN, {"username": "analyst", "password": new, "next": PROFILE}, follow=True)
+    assert again.status_code == 200 and "was reset by" not in again.content.decode()
+
+
 def test_a_temporary_password_ends_by_itself(cast, client):
     user, temporary = services.reset_password(by=cast.administrator, user_id=cast.analyst.pk, reason="forgotten")
     User.objects.filter(pk=user.pk).update(temporary_until="2020-01-01T00:00:00Z")

@@ -10,6 +10,7 @@ import socket
 import subprocess
 import sys
 import time
+from contextlib import ExitStack
 from pathlib import Path
 
 import pytest
@@ -93,6 +94,11 @@ def test_start_serves_restarts_what_was_killed_and_leaves_nothing_running(labora
     try:
         assert until(lambda: f"Bandledger: http://127.0.0.1:{port}/" in log.read_text()), log.read_text()
         assert status_of(port) == 200
+        with ExitStack() as open_sockets:
+            for _ in range(120):  # more than the web server takes by itself, none of which ends its request
+                half_open = socket.create_connection(("127.0.0.1", port), timeout=5)
+                open_sockets.enter_context(half_open).sendall(b"GET / HTTP/1.1\r\nHost: localhost\r\n")
+            assert status_of(port) == 200
         children = children_of(served.pid)
         pids |= set(children)
         assert len(children) == 3
@@ -175,7 +181,8 @@ def test_the_worker_takes_one_message_at_a_time_and_the_server_bounds_what_it_st
         "::1", 8760, upload_max_bytes=2**26, trusted_proxy="192.0.2.7", on_sweep_line=lambda line: True
     )
     assert "--listen=[::1]:8760" in server.command
-    assert f"--max-request-body-size={2**28}" in server.command
+    assert f"--max-request-body-size={2**26 + 2**20}" in server.command
+    assert "--connection-limit=800" in server.command and "--channel-timeout=20" in server.command
     assert "--trusted-proxy=192.0.2.7" in server.command
     assert "--pool=solo" in worker.command or {"--pool=prefork", "--concurrency=1"} <= set(worker.command)
     assert sweep.command[-3:] == ("sweep", "--every", "5")

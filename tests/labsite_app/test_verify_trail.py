@@ -210,3 +210,66 @@ def test_a_trigger_whose_body_was_emptied_is_found(trail):
                 f"CREATE OR REPLACE FUNCTION {name}() RETURNS trigger LANGUAGE plpgsql AS 'BEGIN RETURN OLD; END;'"
             )
     assert missing_triggers() == [name]
+
+
+def test_the_verification_names_a_dropped_trigger(trail):
+    with connection.cursor() as cursor:
+        if connection.vendor == "sqlite":
+            cursor.execute("DROP TRIGGER trail_trailentry_no_update")
+        else:
+            cursor.execute("SET CONSTRAINTS ALL IMMEDIATE")
+            cursor.execute("ALTER TABLE trail_trailentry DISABLE TRIGGER trail_trailentry_no_update")
+    expected = "trigger trail_trailentry_no_update: missing or altered: records could be changed unnoticed"
+    assert damages() == [expected]
+
+
+def test_a_check_of_the_trail_itself_that_cannot_run_does_not_stop_the_others(trail, monkeypatch):
+    def broken(last_seq):
+        raise OSError("the disk is gone")
+
+    monkeypatch.setattr(verify, "_tail_damages", broken)
+    monkeypatch.setitem(verify._verifiers, "files", lambda: [verify.Damage("file abc", "its bytes were changed")])
+    assert damages() == [
+        "head of the trail: this check could not be finished: OSError: the disk is gone",
+        "file abc: its bytes were changed",
+    ]
+
+
+def only_on_sqlite() -> bool:
+    """PostgreSQL keeps the form of a column; there this finding cannot come about."""
+    return connection.vendor == "sqlite"
+
+
+def test_an_entry_stored_as_text_is_named_and_the_others_are_still_looked_at(trail):
+    if only_on_sqlite():
+        tamper("UPDATE trail_trailentry SET canonical = CAST(canonical AS TEXT) WHERE seq = 3")
+        tamper("UPDATE trail_trailentry SET canonical = 7 WHERE seq = 4")
+        tamper("UPDATE trail_trailentry SET reason = 'another' WHERE seq = %s", trail)
+        found = damages()
+        assert found[:2] == [f"entry {seq}: {verify.OTHER_FORM}" for seq in (3, 4)]
+        assert f"entry {trail}: the column reason was changed: it no longer says what the entry says" in found
+        assert not any("could not be finished" in line for line in found)
+        assert verify.verify(fast=True).entries == trail
+
+
+def test_personal_details_stored_as_text_are_named(trail):
+    if only_on_sqlite():
+        tamper("UPDATE trail_trailpersonal SET details = CAST(details AS TEXT) WHERE entry_id = %s", trail)
+        tamper("UPDATE trail_trailpersonal SET salt = 'salt' WHERE entry_id = %s", trail - 1)
+        what = "its personal details are stored in another form than the trail writes"
+        assert damages() == [f"entry {seq}: {what}" for seq in (trail - 1, trail)]
+
+
+@pytest.mark.parametrize("rubbish", ["yesterday", "2026-13-45 00:00:00", 7])
+def test_a_time_that_is_none_is_named_and_the_others_are_still_looked_at(trail, rubbish):
+    if only_on_sqlite():
+        tamper("UPDATE trail_trailentry SET at = %s WHERE seq IN (3, 5)", rubbish)
+        what = "the column at was changed: it no longer says what the entry says"
+        assert damages() == [f"entry {seq}: {what}" for seq in (3, 5)]
+        assert damages(fast=True) == []
+
+
+def test_an_entry_that_is_deeply_nested_rubbish_is_named(trail):
+    tamper("UPDATE trail_trailentry SET canonical = %s WHERE seq = 3", b"[" * 200_000)
+    assert damages(fast=True)[0].startswith("entry 3: its content was changed")
+    assert not any("could not be finished" in line for line in damages())

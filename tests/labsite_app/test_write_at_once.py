@@ -100,6 +100,7 @@ def test_a_unit_of_work_inside_somebody_elses_transaction_is_refused():
 def test_two_administrators_who_remove_each_other_leave_one():
     first = make_person("first", roles=(Role.LAB_ADMINISTRATOR,))
     second = make_person("second", roles=(Role.LAB_ADMINISTRATOR,))
+    assert first.roles == second.roles == {"lab_administrator"}  # read now: both were allowed when they began
     together = threading.Barrier(2, timeout=WAIT_S)
 
     def remove(by: User, whom: User) -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import threading
+import time
 from collections.abc import Callable
 
 import pytest
@@ -131,6 +132,68 @@ def test_a_file_and_a_submission_at_once_leave_nothing_unsigned(cast, lab, quick
         assert len(done) == len(refused) == 1 and refused[0].status == 409
         submitted = InterpretationVersion.objects.get(pk=version.pk).state == "submitted"
         assert Spectrum.objects.filter(examination=row).count() == (1 if submitted else 2)
+
+
+def test_an_edit_and_a_submission_at_once_never_wait_for_each_other(cast, lab, quick_computing, monkeypatch):
+    """The edit holds the version and goes on to note whose work it is, which needs the examination."""
+    version = builders.drafted_version(cast, lab)
+    builders.confirm_all(version, cast.analyst)
+    builders.conclude(version, cast.analyst)
+    proof, shown, claim = (
+        builders.proof_of(cast.analyst),
+        builders.hash_to_sign(version),
+        version.claims.get(key="group:ester"),
+    )
+    edit_is_under_way, note = threading.Event(), drafts.contribute
+
+    def slowly(*, examination, user, kind):
+        if user.pk == cast.second_analyst.pk:
+            edit_is_under_way.set()
+            time.sleep(0.5)  # the submission gets as far as it can
+        note(examination=examination, user=user, kind=kind)
+
+    def submit_meanwhile():
+        assert edit_is_under_way.wait(20)
+        return drafts.submit(version_id=version.pk, by=own_copy(cast.analyst), proof=proof, content_hash=shown)
+
+    monkeypatch.setattr(drafts, "contribute", slowly)
+    done, refused = split(
+        at_once(
+            lambda: drafts.change_claim(
+                version_id=version.pk,
+                claim_id=claim.pk,
+                by=own_copy(cast.second_analyst),
+                verdict="undecided",
+                reason="I see it otherwise.",
+                edits=None,
+            ),
+            submit_meanwhile,
+        )
+    )
+    assert len(done) == len(refused) == 1 and refused[0].status == 409, refused
+    assert InterpretationVersion.objects.get(pk=version.pk).state == "draft"
+
+
+def test_an_analysis_that_ends_and_a_submission_at_once_never_wait_for_each_other(cast, lab, quick_computing):
+    for round_number in range(3):
+        version = builders.drafted_version(cast, lab, lot=f"L-{round_number}")
+        builders.confirm_all(version, cast.analyst)
+        builders.conclude(version, cast.analyst)
+        row = version.interpretation.examination
+        replicate = builders.upload(row, cast.analyst, data=builders.jcamp_file(seed=9)).spectra.get()
+        waiting, proof = replicate.analyses.get(), builders.proof_of(cast.analyst)
+        shown = builders.hash_to_sign(version)
+        done, refused = split(
+            at_once(
+                lambda v=version, p=proof, s=shown: drafts.submit(
+                    version_id=v.pk, by=own_copy(cast.analyst), proof=p, content_hash=s
+                ),
+                lambda w=waiting: analyses.execute(analysis_id=w.pk),
+            )
+        )
+        assert len(done) == 2 and not refused
+    result = verify()
+    assert result.ok, result.damages
 
 
 def test_two_workers_claim_one_analysis_and_one_does_it(cast, lab, quick_computing, rung):

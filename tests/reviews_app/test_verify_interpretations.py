@@ -38,8 +38,8 @@ def name(version) -> str:
         ("status = 'proposed'", "status"),
         ("reason = 'because'", "reason"),
         ("title = 'Other'", "title"),
-        ("computed_verdict = 'undecided'", "computed"),
-        ("evidence = '{}'", "computed"),
+        ("computed_verdict = 'undecided'", "computed.verdict"),
+        ("computed_text = 'nothing'", "computed.text"),
         ("must_see = %s", "must_see"),
         ("stated_by_id = NULL", "stated_by"),
     ],
@@ -65,8 +65,9 @@ def test_a_changed_point_is_named(approved):
 
 
 def test_a_changed_conclusion_is_named(approved):
-    tamper("UPDATE reviews_interpretationversion SET conclusion = 'inconclusive'")
-    assert damages() == {name(approved): {"The conclusion shown differs from the signed one."}}
+    tamper("UPDATE reviews_interpretationversion SET conclusion = 'inconclusive', conclusion_text = 'no'")
+    what = "What is shown differs from what was signed: conclusion, conclusion_text."
+    assert damages() == {name(approved): {what}}
 
 
 def test_altered_content_is_named(approved):
@@ -91,7 +92,10 @@ def test_a_swapped_signature_is_named(approved):
     decision = Decision.objects.get()
     tamper("UPDATE reviews_decision SET signature_id = %s", approved.submission_id)
     assert damages() == {
-        name(approved): {"Its decision carries a signature that was made for something else."},
+        name(approved): {
+            "Its decision carries a signature that was made for something else.",
+            "It was decided by somebody whose own work it is.",  # the signature is the analyst's
+        },
         f"signature {decision.signature_id}": {f"What it signed on interpretation version {approved.pk} is gone."},
     }
 
@@ -106,7 +110,9 @@ def test_a_signature_taken_from_another_version_is_named(approved, cast, lab):
 
 def test_a_decision_by_another_person_than_signed_is_named(approved, cast):
     tamper("UPDATE reviews_decision SET by_id = %s", cast.qa_manager.pk)
-    assert damages() == {name(approved): {"Its decision carries a signature that was made for something else."}}
+    found = damages()
+    assert "Its decision carries a signature that was made for something else." in found[name(approved)]
+    assert [what.rpartition(": ")[2] for what in found[f"{name(approved)}, decision"]] == ["by."]
 
 
 def test_a_decision_by_somebody_whose_own_work_it_is_is_named(approved, cast):
@@ -121,12 +127,16 @@ def test_a_decision_by_somebody_whose_own_work_it_is_is_named(approved, cast):
 @pytest.mark.parametrize("state", ["submitted", "in_review", "rejected"])
 def test_a_decision_undone_is_named(approved, state):
     tamper("UPDATE reviews_interpretationversion SET state = %s", state)
-    assert damages() == {name(approved): {"Its state does not follow from its decision."}}
+    assert damages() == {
+        name(approved): {"Its state does not follow from its decision.", "It should be approved: so the trail says."}
+    }
 
 
 def test_a_withdrawal_without_one_is_named(approved):
     tamper("UPDATE reviews_interpretationversion SET state = 'withdrawn'")
-    assert damages() == {name(approved): {"Its state does not follow from its withdrawal."}}
+    assert damages() == {
+        name(approved): {"Its state does not follow from its withdrawal.", "It should be approved: so the trail says."}
+    }
 
 
 def test_a_decided_version_made_a_draft_again_is_named(approved):
@@ -137,13 +147,23 @@ def test_a_decided_version_made_a_draft_again_is_named(approved):
 def test_an_approval_without_a_decision_is_named(cast, lab, quick_computing):
     version = builders.submitted_version(cast, lab)
     tamper("UPDATE reviews_interpretationversion SET state = 'approved'")
-    assert damages() == {name(version): {"It is approved without a signed decision."}}
+    assert damages() == {
+        name(version): {
+            "It is approved without a signed decision.",
+            "It should be waiting for a second reading: so the trail says.",
+        }
+    }
 
 
 def test_an_analysis_exchanged_under_a_signed_version_is_named(approved, cast, lab):
     other = builders.drafted_version(cast, lab, lot="L-2")
     tamper("UPDATE reviews_interpretationversion SET analysis_id = %s WHERE id = %s", other.analysis_id, approved.pk)
-    assert damages() == {name(approved): {"The analysis it rests on differs from the one that was signed."}}
+    assert damages() == {
+        name(approved): {
+            "What is shown differs from what was signed: analysis.id.",
+            "The analysis is of another spectrum than the one that was signed as decisive.",
+        }
+    }
 
 
 def test_a_removed_proposal_is_named_by_its_signature(cast, lab, quick_computing):

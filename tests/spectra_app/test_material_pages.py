@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
+import re
+
 import pytest
 from django.urls import reverse
 
+from labsite.errors import BadInput
 from spectra.models import MaterialVersion, WatchList
+from spectra.services import master
 from tests.builders import draft_material, register_reference
 from tests.cast import make_person
 
@@ -189,3 +193,47 @@ def test_a_second_method_owner_who_changed_the_draft_reads_why_they_cannot_appro
         page = as_person(person).get(reverse("spectra:approve", args=["material", draft.pk])).content.decode()
         assert "You wrote this or a part of it" in page
         assert 'type="password"' not in page
+
+
+def test_the_groups_of_the_structure_are_ticked_with_one_button_and_nothing_is_saved(cast, lab, as_person):
+    client = as_person(cast.method_owner)
+    part = client.get(reverse("spectra:structure"), {"smiles": "CC(C)OC(C)=O"}).content.decode()
+    assert 'name="take_groups"' in part
+    answer = client.post(NEW, sent(take_groups="1", expected_groups=["water"], name=""))
+    page = answer.content.decode()
+    assert answer.status_code == 200
+    for group in ("ester", "alkane_ch", "water"):
+        assert re.search(rf'name="expected_groups" value="{group}"[^>]* checked', page), group
+    assert not re.search(r'name="expected_groups" value="ketone"[^>]* checked', page)
+    assert "Ticked under Expected: " in page
+    assert "Please mend" not in page and "This field is required" not in page
+    assert not MaterialVersion.objects.filter(material__code="IPA").exists()
+    again = client.post(NEW, sent(take_groups="1", expected_groups=["ester", "alkane_ch"])).content.decode()
+    assert "ticked under Expected already" in again
+
+
+def test_taking_groups_without_a_structure_says_so(cast, lab, as_person):
+    page = as_person(cast.method_owner).post(NEW, sent(take_groups="1", smiles="")).content.decode()
+    assert "No structure was given" in page
+
+
+def test_the_page_of_a_material_offers_no_button_that_only_its_form_has(cast, lab, as_person):
+    version = draft_material(cast, code="IPA", smiles="CC(C)OC(C)=O")
+    page = as_person(cast.method_owner).get(reverse("spectra:material", args=[version.pk])).content.decode()
+    assert 'name="take_groups"' not in page
+
+
+def test_the_blind_second_reading_is_shown_as_not_offered_and_refused(cast, lab, as_person):
+    client = as_person(cast.method_owner)
+    page = client.get(NEW).content.decode()
+    assert re.search(r'<option value="blind"[^>]* disabled', page)
+    assert "not offered yet" in page
+    answer = client.post(NEW, sent(review_mode="blind"))
+    assert answer.status_code == 422
+    assert 'id="id_review_mode_error"' in answer.content.decode()
+    with pytest.raises(BadInput) as refusal:
+        draft_material(cast, code="IPA", review_mode="blind")
+    assert refusal.value.code == "material.review_mode_not_offered"
+    draft = draft_material(cast, code="IPA")
+    with pytest.raises(BadInput):
+        master.change_material(pk=draft.pk, by=cast.method_owner, values={"review_mode": "blind"})

@@ -196,3 +196,26 @@ def test_an_approved_table_that_a_later_program_cannot_read_still_opens(cast, la
     assert "cannot read this older text" in page
     assert client.get(reverse("spectra:material", args=[lab.material.pk])).status_code == 200
     assert client.get(reverse("spectra:new_material")).status_code == 200
+
+
+@pytest.mark.parametrize(("name", "words"), [("method", "Method version 1"), ("group_table", "Group table version 1")])
+def test_what_was_loaded_already_is_refused_with_the_version_that_holds_it(cast, as_person, name, words):
+    client = as_person(cast.method_owner)
+    url = reverse(f"spectra:load_{name}")
+    assert client.post(url).status_code == 302
+    answer = client.post(url)
+    page = answer.content.decode()
+    assert answer.status_code == 409
+    assert f"{words} holds the very same" in page and "Have that draft approved." in page
+    assert {"method": MethodVersion, "group_table": GroupTable}[name].objects.count() == 1
+
+
+def test_a_version_that_changes_nothing_is_refused_on_its_form(cast, lab, as_person):
+    client = as_person(cast.method_owner)
+    table = client.post(reverse("spectra:new_group_table"), {"text": lab.table.text})
+    text = json.dumps(lab.method.parameters)
+    method = client.post(reverse("spectra:new_method"), {"name": "again", "text": text})
+    for answer in (table, method):
+        assert answer.status_code == 409
+        assert "Use that one." in answer.content.decode()
+    assert (GroupTable.objects.count(), MethodVersion.objects.count()) == (1, 1)

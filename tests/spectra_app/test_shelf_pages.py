@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from datetime import date, timedelta
+from html import unescape
 
 import pytest
 from django.core.files.uploadedfile import SimpleUploadedFile
 from django.urls import reverse
 
+from labsite.trail import selectors
 from spectra.models import RawFile, Reference
 from tests.builders import jcamp_file, register_reference, table_file
 
@@ -167,3 +169,72 @@ def test_the_shelf_is_searched_by_words(cast, lab, as_person):
     nothing = client.get(reverse("spectra:shelf"), {"text": "<i>nothing"}).content.decode()
     assert "No reference fits this search." in nothing
     assert "<i>nothing" not in nothing
+
+
+WHY = "the software writes GAS for every file"
+
+
+@pytest.mark.parametrize(
+    ("headers", "values", "field", "words"),
+    [
+        ({"STATE": "GAS (150 mmHg)"}, {}, "phase", "measured as gas, not as liquid"),
+        ({"STATE": "SOLID"}, {}, "phase", "measured as solid, not as liquid"),
+        ({"RESOLUTION": "8"}, {"resolution_cm1": "2"}, "resolution_cm1", "resolution 8 cm⁻¹, not 2 cm⁻¹"),
+        (
+            {"LONGDATE": "2025/01/31"},
+            {"standard_received_on": "2025-02-01"},
+            "standard_received_on",
+            "measured on 2025-01-31, before the standard came",
+        ),
+        ({"LONGDATE": "2098/06/01"}, {}, "standard_expires_on", "after the standard expired on 2098-05-01"),
+    ],
+)
+def test_what_the_files_own_header_contradicts_is_refused(cast, lab, as_person, headers, values, field, words):
+    answer = as_person(cast.method_owner).post(URL, sent(lab, jcamp_file(headers=headers), **values))
+    page = unescape(answer.content.decode())
+    assert answer.status_code == 422
+    assert words in page and "why the file's header is wrong" in page
+    assert f'id="id_{field}_error"' in page
+    assert not Reference.objects.filter(code="R-7").exists()
+
+
+@pytest.mark.parametrize(
+    ("headers", "values"),
+    [
+        ({"STATE": "LIQUID", "RESOLUTION": "3.857", "LONGDATE": "2026/01/02"}, {"resolution_cm1": "4"}),
+        ({"STATE": "LIQUID"}, {"phase": "film"}),
+        ({"STATE": "as it came", "RESOLUTION": "unknown", "DATE": "01/06/01"}, {"resolution_cm1": "4"}),
+        ({"RESOLUTION": "8"}, {}),
+    ],
+)
+def test_what_agrees_or_is_left_open_is_registered(cast, lab, as_person, headers, values):
+    assert as_person(cast.method_owner).post(URL, sent(lab, jcamp_file(headers=headers), **values)).status_code == 302
+
+
+def test_a_wrong_header_is_overruled_with_a_reason_that_stays_visible(cast, lab, as_person):
+    data = jcamp_file(headers={"STATE": "GAS"})
+    answer = as_person(cast.method_owner).post(
+        URL, sent(lab, data, header_wrong="on", header_contradicted=WHY), follow=True
+    )
+    row = Reference.objects.get(code="R-7")
+    assert row.answers["header_contradicted"] == WHY
+    assert WHY in answer.content.decode()
+    approving = as_person(cast.qa_manager).get(reverse("spectra:approve", args=["reference", row.pk]))
+    assert WHY in approving.content.decode()
+    entry = selectors.search(event="reference.registered").rows[0]
+    assert entry.reason == WHY
+    assert ("Against the file's header", "the file says that it was measured as gas, not as liquid") in entry.facts
+
+
+@pytest.mark.parametrize(
+    ("headers", "values", "field"),
+    [
+        ({"STATE": "GAS"}, {"header_wrong": "on"}, "header_contradicted"),
+        ({"STATE": "GAS"}, {"header_contradicted": WHY}, "header_wrong"),
+        ({"STATE": "LIQUID"}, {"header_wrong": "on", "header_contradicted": WHY}, "header_contradicted"),
+    ],
+)
+def test_overruling_needs_the_tick_the_reason_and_something_to_overrule(cast, lab, as_person, headers, values, field):
+    answer = as_person(cast.method_owner).post(URL, sent(lab, jcamp_file(headers=headers), **values))
+    assert answer.status_code == 422
+    assert f'id="id_{field}_error"' in answer.content.decode()

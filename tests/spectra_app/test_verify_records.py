@@ -67,7 +67,7 @@ def test_a_result_changed_together_with_its_digest_is_named(done):
         changed.digest,
         done.pk,
     )
-    assert (f"analysis {done.pk}", "Its result is not the one that the trail recorded.") in damages()
+    assert (f"analysis {done.pk}", "Its result is not the one that the trail recorded: result_digest.") in damages()
 
 
 def test_a_finished_analysis_made_to_wait_again_is_named(done):
@@ -104,6 +104,7 @@ def test_a_record_approved_without_a_signature_is_named(cast, done):
     tamper("UPDATE spectra_materialversion SET state = 'approved' WHERE id = %s", draft.pk)
     assert damages() == [
         ("material Something new", "It is marked approved without a signature over its content."),
+        ("material Something new", "The trail says that it is draft."),
     ]
 
 
@@ -120,9 +121,13 @@ def test_an_approval_borrowed_from_another_record_is_named(cast, done, lab):
     assert {what for where, what in damages() if where == "material Something new"} == {
         "Its approval carries a signature that was made for something else.",
         "Its content differs from what was approved.",
+        "The trail says that it is draft.",
     }
 
 
 def test_an_approved_record_made_a_draft_again_is_named(done, lab):
     tamper("UPDATE spectra_materialversion SET state = 'draft' WHERE id = %s", lab.material.pk)
-    assert damages() == [("material Ethyl acetate", "It was approved, and was made a draft again.")]
+    assert damages() == [
+        ("material Ethyl acetate", "It was approved, and was made a draft again."),
+        ("material Ethyl acetate", "The trail says that it is approved."),
+    ]

@@ -40,7 +40,9 @@ class Command(BaseCommand):
             raise CommandError(f"{error.message} {error.remedy}".strip()) from None
         except (EOFError, KeyboardInterrupt):
             raise CommandError(
-                f"Nothing was set up. Without a terminal, give --username, --printed-name and {PASSWORD_VARIABLE}."
+                f"No account was opened. Without a terminal, put the password into the environment as "
+                f"{PASSWORD_VARIABLE} and run: "
+                "python3 manage.py first_administrator --username … --printed-name …; then start --own again."
             ) from None
         self.stdout.write(f"{user.printed_name} can sign in now as {user.username}.")
 
