@@ -10,6 +10,7 @@ from django.db import connection
 from django.db.models.signals import post_migrate
 
 from labsite.trail import triggers
+from labsite.trail.verify import verify
 
 INSTALLER = "trail.install_triggers"
 
@@ -48,3 +49,13 @@ def tamper(statement: str, *values: object) -> int:
     with lifted_triggers(), connection.cursor() as cursor:
         cursor.execute(statement, values)
         return cursor.rowcount
+
+
+def damages() -> dict[str, set[str]]:
+    """What verification finds wrong, by the record it names; it must find something."""
+    result = verify()
+    assert not result.ok
+    found: dict[str, set[str]] = {}
+    for damage in result.damages:
+        found.setdefault(damage.where, set()).add(damage.what)
+    return found

@@ -7,7 +7,7 @@ import pytest
 from labsite.trail.verify import verify
 from reviews.models import Claim, Decision, InterpretationVersion
 from tests import builders
-from tests.lifting import tamper
+from tests.lifting import damages, tamper
 
 
 @pytest.fixture
@@ -15,15 +15,6 @@ def approved(cast, lab, quick_computing):
     version = builders.approved_version(cast, lab)
     assert verify().ok, verify().damages
     return version
-
-
-def damages() -> dict[str, set[str]]:
-    result = verify()
-    assert not result.ok
-    found: dict[str, set[str]] = {}
-    for damage in result.damages:
-        found.setdefault(damage.where, set()).add(damage.what)
-    return found
 
 
 def name(version) -> str:

@@ -11,16 +11,7 @@ from labsite.trail.verify import verify
 from reviews.models import Decision, InterpretationVersion, ReviewRead
 from reviews.services import drafts, reviewing
 from tests import builders
-from tests.lifting import tamper
-
-
-def damages() -> dict[str, set[str]]:
-    result = verify()
-    assert not result.ok
-    found: dict[str, set[str]] = {}
-    for damage in result.damages:
-        found.setdefault(damage.where, set()).add(damage.what)
-    return found
+from tests.lifting import damages, tamper
 
 
 def name(version) -> str:

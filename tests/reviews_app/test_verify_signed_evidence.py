@@ -13,7 +13,7 @@ from reviews.services import drafts
 from spectra.services import uploads
 from tests import builders
 from tests.cast import make_person
-from tests.lifting import tamper
+from tests.lifting import damages, tamper
 
 
 @pytest.fixture
@@ -40,15 +40,6 @@ def approved(cast, lab, quick_computing):
     )
     assert verify().ok, verify().damages
     return InterpretationVersion.objects.get(pk=version.pk)
-
-
-def damages() -> dict[str, set[str]]:
-    result = verify()
-    assert not result.ok
-    found: dict[str, set[str]] = {}
-    for damage in result.damages:
-        found.setdefault(damage.where, set()).add(damage.what)
-    return found
 
 
 def name(version) -> str:
