@@ -18,18 +18,31 @@ pytestmark = pytest.mark.django_db(transaction=True)
 
 @contextmanager
 def without_foreign_keys() -> Iterator[None]:
-    """As an intruder who owns the database can switch them off."""
-    off, on = {
-        "sqlite": ("PRAGMA foreign_keys = OFF", "PRAGMA foreign_keys = ON"),
-        "postgresql": ("SET session_replication_role = replica", "SET session_replication_role = DEFAULT"),
-    }[connection.vendor]
+    """As an intruder who owns the tables can take them away and put them back unasked."""
     with connection.cursor() as cursor:
-        cursor.execute(off)
+        restore = _take_away(cursor)
     try:
         yield
     finally:
         with connection.cursor() as cursor:
-            cursor.execute(on)
+            for statement in restore:
+                cursor.execute(statement)
+
+
+def _take_away(cursor) -> list[str]:
+    if connection.vendor == "sqlite":
+        cursor.execute("PRAGMA foreign_keys = OFF")
+        return ["PRAGMA foreign_keys = ON"]
+    cursor.execute(
+        "SELECT conrelid::regclass::text, quote_ident(conname), pg_get_constraintdef(oid) FROM pg_constraint"
+        " WHERE contype = 'f' AND connamespace = current_schema()::regnamespace"
+    )
+    restore = []
+    for table, name, definition in cursor.fetchall():
+        cursor.execute(f"ALTER TABLE {table} DROP CONSTRAINT {name}")
+        unasked = definition if definition.endswith("NOT VALID") else f"{definition} NOT VALID"
+        restore.append(f"ALTER TABLE {table} ADD CONSTRAINT {name} {unasked}")
+    return restore
 
 
 @pytest.fixture
