@@ -275,7 +275,7 @@ def _spectrum_figure(
     low, high = max(others[0], low - (high - low) / 4), min(others[1], high + (high - low) / 4)
     room = high - low
     # Room above (absorbance) or below (transmittance) the trace for the band positions.
-    edges = (low - 0.04 * room, high + 0.2 * room) if show == "absorbance" else (low - 0.2 * room, high + 0.08 * room)
+    edges = (low - 0.04 * room, high + 0.3 * room) if show == "absorbance" else (low - 0.3 * room, high + 0.08 * room)
     y_range = Range1d(start=edges[0], end=edges[1])
     title = "absorbance" if show == "absorbance" else "transmittance (fraction)"
     plot = _base_figure(
