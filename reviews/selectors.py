@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import datetime
@@ -289,11 +288,6 @@ def approval_blockers(version: InterpretationVersion, reviewer: User) -> list[st
     if unsettled:
         blockers.append(f"{unsettled} disagreement{'s are' if unsettled > 1 else ' is'} not settled.")
     return blockers
-
-
-def signed_content(version: InterpretationVersion) -> dict:
-    """The document as it was signed. Empty for a draft."""
-    return json.loads(bytes(version.content)) if version.content is not None else {}
 
 
 # What waits for whom.

@@ -8,10 +8,6 @@ from labsite.errors import NotAllowed
 READERS = (Role.ANALYST, Role.REVIEWER, Role.QA_MANAGER, Role.METHOD_OWNER)
 
 
-def may_read(user: User) -> bool:
-    return user.has_role(*READERS)
-
-
 def may_analyse(user: User) -> bool:
     return user.has_role(Role.ANALYST)
 
@@ -23,15 +19,6 @@ def may_own_methods(user: User) -> bool:
 def may_approve_master_data(user: User) -> bool:
     """A second method owner or a QA manager; that it is not the author is judged at the record itself."""
     return user.has_role(Role.METHOD_OWNER, Role.QA_MANAGER)
-
-
-def require_reader(user: User) -> None:
-    if not may_read(user):
-        raise NotAllowed(
-            "records.not_a_reader",
-            "This account holds no role that works with samples.",
-            remedy="Ask a lab administrator for the analyst, reviewer, QA manager or method owner role.",
-        )
 
 
 def require_analyst(user: User) -> None:

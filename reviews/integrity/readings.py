@@ -59,10 +59,7 @@ def _decision(row: InterpretationVersion, where: str, history: list[Told]) -> It
     entry = next((entry for entry in reversed(history) if entry.event in VERDICT_OF), None)
     decision = getattr(row, "decision", None)
     if entry is None or decision is None:
-        if entry is not None:
-            yield Damage(where, f"Entry {entry.seq} says that it was decided; the decision is gone.")
-        elif decision is not None:
-            yield Damage(where, "No entry of the trail says that it was decided.")
+        yield from _one_missing(entry, decision, where, "decided", "decision")
         return
     promised = {"verdict": VERDICT_OF[entry.event], "by": entry.actor_id, "comment": entry.reason, **_kept(entry)}
     shown = {
@@ -76,14 +73,19 @@ def _decision(row: InterpretationVersion, where: str, history: list[Told]) -> It
     yield from _digest(entry, where, lambda: second_reading.digest_of_decision(decision))
 
 
+def _one_missing(entry: Told | None, act: object | None, where: str, done: str, noun: str) -> Iterator[Damage]:
+    """The act without its entry, or the entry without its act; nothing where there is neither."""
+    if entry is not None:
+        yield Damage(where, f"Entry {entry.seq} says that it was {done}; the {noun} is gone.")
+    elif act is not None:
+        yield Damage(where, f"No entry of the trail says that it was {done}.")
+
+
 def _withdrawal(row: InterpretationVersion, where: str, history: list[Told]) -> Iterator[Damage]:
     entry = next((entry for entry in reversed(history) if entry.event == Event.INTERPRETATION_WITHDRAWN), None)
     withdrawal = getattr(row, "withdrawal", None)
     if entry is None or withdrawal is None:
-        if entry is not None:
-            yield Damage(where, f"Entry {entry.seq} says that it was withdrawn; the withdrawal is gone.")
-        elif withdrawal is not None:
-            yield Damage(where, "No entry of the trail says that it was withdrawn.")
+        yield from _one_missing(entry, withdrawal, where, "withdrawn", "withdrawal")
         return
     promised = {"by": entry.actor_id, "reason": entry.reason, **_kept(entry)}
     shown = {"by": withdrawal.by_id, "reason": withdrawal.reason, "withdrawn_at": withdrawal.at}
